@@ -1,0 +1,39 @@
+"""The one door to the rules: a record and the tables in, findings out."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from datetime import datetime
+
+from cds.clinical.findings import Finding
+from cds.clinical.record import PatientRecord
+from cds.clinical.rules.data import confirm_still_taken, ejection_fraction_missing
+from cds.clinical.rules.monitoring import check_potassium_creatinine
+from cds.clinical.rules.therapy import start_beta_blocker, start_mra, start_ras_inhibitor, start_sglt2_inhibitor
+from cds.clinical.situation import Situation, understand
+from cds.clinical.tables import ClinicalTables
+
+Rule = Callable[[Situation], tuple[Finding, ...]]
+
+RULES: tuple[Rule, ...] = (
+    start_ras_inhibitor,
+    start_beta_blocker,
+    start_mra,
+    start_sglt2_inhibitor,
+    check_potassium_creatinine,
+    ejection_fraction_missing,
+    confirm_still_taken,
+)
+
+
+def findings_in(situation: Situation) -> tuple[Finding, ...]:
+    """Every rule's answers, in the order of `RULES`, then by subject. One answer per rule and subject."""
+    found: list[Finding] = []
+    for rule in RULES:
+        found.extend(sorted(rule(situation), key=lambda finding: finding.about or ""))
+    return tuple(found)
+
+
+def evaluate(record: PatientRecord, tables: ClinicalTables, *, as_of: datetime) -> tuple[Finding, ...]:
+    """Answer every rule for one patient on one instant; nothing dated after `as_of` matters."""
+    return findings_in(understand(record, tables, as_of=as_of))

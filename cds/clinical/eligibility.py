@@ -7,7 +7,7 @@ from __future__ import annotations
 
 from collections.abc import Iterable
 from dataclasses import dataclass, field
-from datetime import timedelta
+from datetime import date, timedelta
 from typing import Literal
 
 from cds.clinical.findings import Evidence
@@ -33,7 +33,8 @@ class Judgement:
     limits: list[str] = field(default_factory=list)
     wanted_tests: list[str] = field(default_factory=list)
     needs_referral: bool = False
-    look_again: list[PartialDate] = field(default_factory=list)
+    look_again: list[date] = field(default_factory=list)  # when a time-bound block is over
+    to_repeat: dict[str, int] = field(default_factory=dict)  # analyte: within how many days
 
     @property
     def answer(self) -> Answer:
@@ -55,7 +56,9 @@ def judge(situation: Situation, drug: str, drug_class: str) -> Judgement:
     judgement = Judgement(drug, drug_class)
     present = concepts_present(situation)
     for barrier in situation.tables.barriers:
-        if _concerns(barrier.drug_classes, barrier.drugs, barrier.not_drugs, drug, drug_class) and present.isdisjoint(barrier.unless):
+        if _concerns(barrier.drug_classes, barrier.drugs, barrier.not_drugs, drug, drug_class) and present.isdisjoint(
+            barrier.unless
+        ):
             _hold_barrier(situation, barrier, judgement, present)
     for row in situation.tables.drug_barriers:
         if _concerns(row.drug_classes, row.drugs, (), drug, drug_class):
@@ -79,7 +82,9 @@ def stopping_barriers(situation: Situation, drug: str, drug_class: str) -> tuple
     return tuple(found)
 
 
-def _concerns(classes: tuple[str, ...], drugs: tuple[str, ...], not_drugs: tuple[str, ...], drug: str, drug_class: str) -> bool:
+def _concerns(
+    classes: tuple[str, ...], drugs: tuple[str, ...], not_drugs: tuple[str, ...], drug: str, drug_class: str
+) -> bool:
     return drug_class in classes and (not drugs or drug in drugs) and drug not in not_drugs
 
 
@@ -93,7 +98,13 @@ def _hold_barrier(situation: Situation, barrier: Barrier, judgement: Judgement, 
     reacted = _reaction_with(situation.record.intolerances, wanted) if barrier.history else None
     if reacted is not None:
         evidence = [Evidence(what=barrier.words, role="limits", resource=reacted.source, date=_text(reacted.recorded))]
-        _apply(barrier, barrier.effect, f"{barrier.words} (recorded as a reaction to {reacted.display})", judgement, evidence)
+        _apply(
+            barrier,
+            barrier.effect,
+            f"{barrier.words} (recorded as a reaction to {reacted.display})",
+            judgement,
+            evidence,
+        )
         return
     if not barrier.history and wanted.isdisjoint(present):
         return
@@ -103,6 +114,8 @@ def _hold_barrier(situation: Situation, barrier: Barrier, judgement: Judgement, 
         effect = _effect_in_time(situation, barrier, problem)
         if effect is not None:
             words = f"{barrier.words}{_on(problem.dated)}"
+            if effect == "block" and barrier.within_days is not None and problem.dated is not None:
+                judgement.look_again.append(problem.dated.plus_days(barrier.within_days).latest)
             _apply(barrier, effect, words, judgement, [_problem(problem)])
             return
     for item in situation.record.procedures_devices:
@@ -141,8 +154,14 @@ def _hold_drug_barrier(situation: Situation, row: DrugBarrier, judgement: Judgem
         least = row.at_least_daily_mg.get(course.drug)
         if row.at_least_daily_mg and (least is None or (course.daily_dose_mg or 0.0) < least):
             continue
-        if course.state == "active" or (row.ended_within_hours is not None and _ended_within(situation, course, row.ended_within_hours)):
-            evidence = [Evidence(what=course.drug, role="limits", resource=course.source, date=_text(course.ended or course.started))]
+        if course.state == "active" or (
+            row.ended_within_hours is not None and _ended_within(situation, course, row.ended_within_hours)
+        ):
+            evidence = [
+                Evidence(
+                    what=course.drug, role="limits", resource=course.source, date=_text(course.ended or course.started)
+                )
+            ]
             judgement.add(row.effect, f"{row.words} ({course.drug})", row.id, evidence)
             return
 
@@ -164,7 +183,12 @@ def _hold_reactions(situation: Situation, judgement: Judgement) -> None:
             judgement.drug_class in intolerance.drug_classes and not intolerance.drugs
         )
         evidence = [
-            Evidence(what=f"{intolerance.kind} to {intolerance.display}", role="limits", resource=intolerance.source, date=_text(intolerance.recorded))
+            Evidence(
+                what=f"{intolerance.kind} to {intolerance.display}",
+                role="limits",
+                resource=intolerance.source,
+                date=_text(intolerance.recorded),
+            )
         ]
         said = f"{_kind_words(intolerance)} to {intolerance.display} is on record{_reaction_words(intolerance)}"
         if is_named:
@@ -172,7 +196,9 @@ def _hold_reactions(situation: Situation, judgement: Judgement) -> None:
             judgement.add(effect, said, "reaction-to-the-drug-itself", evidence)
             continue
         for row in situation.tables.reactions:
-            if judgement.drug_class not in row.reaches or judgement.drug_class not in _reached_from(intolerance, row.to_classes, row.reaches):
+            if judgement.drug_class not in row.reaches or judgement.drug_class not in _reached_from(
+                intolerance, row.to_classes, row.reaches
+            ):
                 continue
             if row.reactions and frozenset(row.reactions).isdisjoint(intolerance.reactions):
                 continue
@@ -191,7 +217,9 @@ def _reached_from(intolerance: Intolerance, to_classes: tuple[str, ...], reaches
 
 
 def _kind_words(intolerance: Intolerance) -> str:
-    words = {"allergy": "an allergy", "intolerance": "an intolerance", "unspecified": "an allergy or intolerance"}[intolerance.kind]
+    words = {"allergy": "an allergy", "intolerance": "an intolerance", "unspecified": "an allergy or intolerance"}[
+        intolerance.kind
+    ]
     return words if intolerance.status == "active" else f"{words} ({intolerance.status})"
 
 
@@ -252,9 +280,10 @@ def _unstable_because(situation: Situation) -> str:
                 if row.unit in reading.by_unit and reading.holds(row.sign, row.value, row.unit):
                     return f"{situation.tables.analyte_names.get(row.analyte, row.analyte)} was {reading.shown}"
         for problem in situation.record.problems:
-            if not frozenset(row.concepts).isdisjoint(problem.concepts) and problem.dated is not None:
-                if row.within_days is None or days_old(problem.dated, situation.today) <= row.within_days:
-                    return problem.display
+            if problem.dated is None or frozenset(row.concepts).isdisjoint(problem.concepts):
+                continue
+            if row.within_days is None or days_old(problem.dated, situation.today) <= row.within_days:
+                return problem.display
     return ""
 
 
@@ -282,10 +311,14 @@ def _hold_limit(situation: Situation, limit: Limit, readings: tuple[Reading, ...
             holds = None
         if holds:
             judgement.add(limit.effect, said, limit.id, [reading.evidence("limits")])
+            if limit.repeat_within_days is not None:
+                judgement.to_repeat[limit.analyte] = limit.repeat_within_days
             return
         if holds is None:
             name = situation.tables.analyte_names.get(limit.analyte, limit.analyte)
-            judgement.missing.append(f"{name}: {say_value(reading, situation.tables)} leaves open whether it is {_SIGN_WORDS[limit.sign]} {show(value)}")
+            judgement.missing.append(
+                f"{name}: {say_value(reading, situation.tables)} leaves open whether it is {_SIGN_WORDS[limit.sign]} {show(value)}"
+            )
             judgement.wanted_tests.append(limit.analyte)
             judgement.evidence.append(reading.evidence("limits"))
             return

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Mapping
 from datetime import datetime
 
 from cds.clinical.findings import Finding
@@ -24,6 +24,19 @@ RULES: tuple[Rule, ...] = (
     ejection_fraction_missing,
     confirm_still_taken,
 )
+
+_START = ("start", "review", "unknown", "blocked", "refer")
+
+# What each rule may put on a card: its actions, and "unknown" or "blocked" where those ask for something.
+ANSWERS: Mapping[str, tuple[str, ...]] = {
+    "start-ras-inhibitor": _START,
+    "start-beta-blocker": (*_START, "switch"),
+    "start-mra": _START,
+    "start-sglt2-inhibitor": _START,
+    "check-potassium-creatinine": ("test", "unknown"),
+    "ejection-fraction-missing": ("test",),
+    "confirm-still-taken": ("document",),
+}
 
 
 def findings_in(situation: Situation) -> tuple[Finding, ...]:

@@ -73,7 +73,9 @@ def determine_phenotype(
     evidence = (reading.evidence("supports"), *signs.evidence)
     said = say_value(reading, tables)
 
-    def result(kind: PhenotypeKind, why: str, extra: tuple[str, ...] = (), more: tuple[Evidence, ...] = ()) -> Phenotype:
+    def result(
+        kind: PhenotypeKind, why: str, extra: tuple[str, ...] = (), more: tuple[Evidence, ...] = ()
+    ) -> Phenotype:
         return Phenotype(
             kind=kind,
             because=why,
@@ -89,7 +91,9 @@ def determine_phenotype(
     if not signs:
         is_stage_b = _classify(measurement.value, is_exact, reading, "<", limits.stage_b_below_percent)
         if is_stage_b or is_reduced:
-            return result("pre-hf", f"{said[0].upper()}{said[1:]} without any sign of heart failure: {NAMES['pre-hf']}.")
+            return result(
+                "pre-hf", f"{said[0].upper()}{said[1:]} without any sign of heart failure: {NAMES['pre-hf']}."
+            )
         structural = _stage_b_evidence(record, tables)
         if structural:
             return result("pre-hf", f"No sign of heart failure, but {structural[0].what}.", more=structural)
@@ -101,7 +105,9 @@ def determine_phenotype(
     earlier = [
         m
         for m in lvefs
-        if m.taken.latest < reading.taken.latest and m.comparator in (None, "<", "<=") and m.value <= limits.reduced_at_most_percent
+        if m.taken.latest < reading.taken.latest
+        and m.comparator in (None, "<", "<=")
+        and m.value <= limits.reduced_at_most_percent
     ]
     if earlier:
         lowest = min(earlier, key=lambda m: (m.value, m.source))
@@ -170,7 +176,14 @@ def signs_of_heart_failure(
         if stay.encounter_class in ("inpatient", "emergency") and not groups.heart_failure.isdisjoint(stay.reasons)
     ]
     if not evidence and stays:
-        evidence.append(Evidence(what="admission for heart failure", role="supports", resource=stays[0].source, date=_text(stays[0].starts)))
+        evidence.append(
+            Evidence(
+                what="admission for heart failure",
+                role="supports",
+                resource=stays[0].source,
+                date=_text(stays[0].starts),
+            )
+        )
         words.append("an admission for heart failure")
     if not evidence and only_for_it:
         course = only_for_it[0]
@@ -191,9 +204,7 @@ def fresh_nyha(record: PatientRecord, tables: ClinicalTables, *, today: date) ->
     return max((reading_of(m) for m in newest), key=lambda r: (r.shown_value, r.source))
 
 
-def _without_lvef(
-    record: PatientRecord, signs: Signs, flags: tuple[str, ...], tables: ClinicalTables
-) -> Phenotype:
+def _without_lvef(record: PatientRecord, signs: Signs, flags: tuple[str, ...], tables: ClinicalTables) -> Phenotype:
     special = _special_failure(record, signs, tables)
     if special is not None:
         return Phenotype(kind=special, because=f"{NAMES[special].capitalize()}.", flags=flags, evidence=signs.evidence)
@@ -204,7 +215,9 @@ def _without_lvef(
     if structural:
         why = f"No sign of heart failure, but {structural[0].what}."
         return Phenotype(kind="pre-hf", because=why, flags=flags, evidence=structural)
-    return Phenotype(kind="none", because="No sign of heart failure is recorded, and no ejection fraction.", flags=flags)
+    return Phenotype(
+        kind="none", because="No sign of heart failure is recorded, and no ejection fraction.", flags=flags
+    )
 
 
 def _special_failure(record: PatientRecord, signs: Signs, tables: ClinicalTables) -> PhenotypeKind | None:
@@ -247,15 +260,20 @@ def admission_within(record: PatientRecord, tables: ClinicalTables, *, today: da
     since = today - timedelta(days=tables.phenotype.admission_days)
     for stay in record.encounters:
         is_for_it = not tables.concepts.heart_failure.isdisjoint(stay.reasons)
-        if stay.encounter_class == "inpatient" and is_for_it and stay.starts is not None and stay.starts.earliest >= since:
-            return Evidence(what="admission for heart failure", role="supports", resource=stay.source, date=str(stay.starts))
+        if (
+            stay.encounter_class == "inpatient"
+            and is_for_it
+            and stay.starts is not None
+            and stay.starts.earliest >= since
+        ):
+            return Evidence(
+                what="admission for heart failure", role="supports", resource=stay.source, date=str(stay.starts)
+            )
     return None
 
 
 def _problem_evidence(problem: Problem, what: str | None = None) -> Evidence:
-    return Evidence(
-        what=what or problem.display, role="supports", resource=problem.source, date=_text(problem.dated)
-    )
+    return Evidence(what=what or problem.display, role="supports", resource=problem.source, date=_text(problem.dated))
 
 
 def _since(problem: Problem) -> str:

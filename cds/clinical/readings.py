@@ -89,9 +89,19 @@ def reading_of(measurement: Measurement) -> Reading:
     """The measurement as bounds in its canonical and its reported unit."""
     by_unit = {measurement.unit: _bounds(measurement, measurement.value, measurement.low, measurement.high)}
     reported = measurement.reported_unit
-    if reported != measurement.unit and units.is_known(measurement.analyte, reported):
-        by_unit[reported] = _bounds(measurement, units.as_reported(measurement.analyte, measurement.reported_value, reported), None, None)
-    shown = show(units.as_reported(measurement.analyte, measurement.reported_value, reported))
+    is_range = measurement.low is not None and measurement.high is not None
+    if is_range and not units.is_same_scale(measurement.analyte, measurement.unit, reported):
+        reported = measurement.unit  # the ends of a range are kept in the canonical unit only
+    elif reported != measurement.unit and units.is_known(measurement.analyte, reported):
+        by_unit[reported] = _bounds(
+            measurement,
+            units.as_reported(measurement.analyte, measurement.reported_value, reported),
+            measurement.low,
+            measurement.high,
+        )
+    sent = measurement.reported_value if reported == measurement.reported_unit else measurement.value
+    shown_value = units.as_reported(measurement.analyte, sent, reported)
+    shown = show(shown_value)
     if measurement.low is not None and measurement.high is not None:
         shown = f"{show(measurement.low)}-{show(measurement.high)}"
     return Reading(
@@ -99,7 +109,7 @@ def reading_of(measurement: Measurement) -> Reading:
         taken=measurement.taken,
         by_unit=by_unit,
         shown=f"{measurement.comparator or ''}{shown}",
-        shown_value=measurement.reported_value,
+        shown_value=shown_value,
         unit=reported,
         source=measurement.source,
         note=measurement.note,

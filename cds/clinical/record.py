@@ -275,9 +275,7 @@ class PatientRecord:
             return when if known(when) else None
 
         problems = tuple(
-            problem
-            if known(problem.abated)
-            else replace(problem, abated=None, clinical_status="active")
+            problem if known(problem.abated) else replace(problem, abated=None, clinical_status="active")
             for problem in self.problems
             if known(problem.onset) and known(problem.recorded)
         )
@@ -296,9 +294,7 @@ class PatientRecord:
                 if known(item.done)
             ),
             encounters=tuple(
-                stay if known(stay.ends) else replace(stay, ends=None)
-                for stay in self.encounters
-                if known(stay.starts)
+                stay if known(stay.ends) else replace(stay, ends=None) for stay in self.encounters if known(stay.starts)
             ),
             tests_ordered=tuple(order for order in self.tests_ordered if known(order.ordered)),
         )

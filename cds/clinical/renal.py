@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from collections import defaultdict
+from collections.abc import Sequence
 from datetime import date
 
 from cds.clinical import units
@@ -10,7 +12,6 @@ from cds.clinical.record import Measurement, PatientRecord
 from cds.clinical.units import round_half_up
 
 EGFR_UNIT = "mL/min/{1.73_m2}"
-MG_DL_PER_UMOL_L = 1 / 88.4  # ruling 37; molar mass 113.12 g/mol
 
 # CKD-EPI 2021 creatinine, without race. Inker LA et al. N Engl J Med 2021;385:1737; coefficients as the National
 # Kidney Foundation prints them.
@@ -25,24 +26,26 @@ def egfr_ckd_epi_2021(*, creatinine_mg_dl: float, age_years: int, sex: str) -> f
     `sex` is "female" or "male"; another word raises KeyError. Valid from 18 years, in steady state.
     """
     ratio = creatinine_mg_dl / _KAPPA_MG_DL[sex]
-    egfr = 142 * min(ratio, 1.0) ** _ALPHA[sex] * max(ratio, 1.0) ** -1.200 * 0.9938**age_years
+    egfr: float = 142 * min(ratio, 1.0) ** _ALPHA[sex] * max(ratio, 1.0) ** -1.200 * 0.9938**age_years
     return egfr * _FEMALE_FACTOR if sex == "female" else egfr
 
 
 def computed_egfr(record: PatientRecord, creatinine: Measurement) -> Reading | None:
     """Compute eGFR from one creatinine; None without a birth date or with a comparator on the value.
 
-    With sex unknown or an imprecise birth date the reading is the range of all it may be, and limits inside the range
-    stay undecided. The reported creatinine goes in unrounded; each end is rounded once, to 0.1 (ruling 1).
+    With sex unknown, or an imprecise date of birth or of the specimen, the reading is the range of all it may be, and
+    limits inside the range stay undecided. The reported creatinine goes in unrounded; each end is rounded once, to 0.1
+    (ruling 1).
     """
-    ages = record.age_years_on(creatinine.taken.latest)
-    if ages is None or creatinine.comparator is not None or ages[0] < 18:
+    first, last = record.age_years_on(creatinine.taken.earliest), record.age_years_on(creatinine.taken.latest)
+    if first is None or last is None or creatinine.comparator is not None or first[0] < 18:
         return None
+    ages = {first[0], last[1]}  # fewest and most completed years
     mg_dl = units.convert("creatinine", creatinine.reported_value, creatinine.reported_unit, "mg/dL")
     sexes = (record.sex,) if record.sex in _ALPHA else ("female", "male")
     values = [
         round_half_up(egfr_ckd_epi_2021(creatinine_mg_dl=mg_dl, age_years=age, sex=sex), 1)
-        for age in set(ages)
+        for age in ages
         for sex in sexes
     ]
     low, high = min(values), max(values)
@@ -63,26 +66,25 @@ def computed_egfr(record: PatientRecord, creatinine: Measurement) -> Reading | N
 def egfr_readings(record: PatientRecord) -> tuple[Reading, ...]:
     """The eGFR of the newest day: reported and computed ones, for the caller to take the one that blocks (ruling 2).
 
-    An MDRD value counts only where nothing else is known of that day.
+    An MDRD value counts only where nothing else is known of that day. A day whose creatinine gives no eGFR (no birth
+    date, a comparator) and that has no reported one is passed over.
     """
-    reported = usable(record, "egfr")
-    creatinines = usable(record, "creatinine")
-    newest = max((m.taken.latest for m in (*reported, *creatinines)), default=None)
-    if newest is None:
-        return ()
-    computed = [
-        egfr
-        for m in of_newest_day(creatinines)
-        if m.taken.latest == newest and (egfr := computed_egfr(record, m)) is not None
-    ]
-    same_day = [m for m in of_newest_day(reported) if m.taken.latest == newest]
+    by_day: dict[date, list[Measurement]] = defaultdict(list)
+    for measurement in (*usable(record, "egfr"), *usable(record, "creatinine")):
+        by_day[measurement.taken.latest].append(measurement)
+    for day in sorted(by_day, reverse=True):
+        if readings := _egfr_of_one_day(record, by_day[day]):
+            return readings
+    return ()
+
+
+def _egfr_of_one_day(record: PatientRecord, measurements: Sequence[Measurement]) -> tuple[Reading, ...]:
+    reported = of_newest_day(m for m in measurements if m.analyte == "egfr")
+    creatinines = of_newest_day(m for m in measurements if m.analyte == "creatinine")
+    computed = [egfr for m in creatinines if (egfr := computed_egfr(record, m)) is not None]
     if computed:
-        same_day = [m for m in same_day if m.method != "mdrd" and m.rank < 2]
-    readings = [*(reading_of(m) for m in same_day), *computed]
-    if readings:
-        return tuple(readings)
-    # The newest creatinine gave no eGFR (no birth date, a comparator): the newest one that is known.
-    return tuple(reading_of(m) for m in of_newest_day(reported))
+        reported = tuple(m for m in reported if m.method != "mdrd" and m.rank < 2)
+    return (*(reading_of(m) for m in reported), *computed)
 
 
 def readings_of(record: PatientRecord, analyte: str) -> tuple[Reading, ...]:

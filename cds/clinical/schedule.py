@@ -8,7 +8,7 @@ date is every day it may be.
 from __future__ import annotations
 
 from collections.abc import Iterable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from datetime import date, timedelta
 from typing import Literal
 
@@ -40,7 +40,9 @@ class Window:
         return max(0, (today - self.due_by).days)
 
 
-def next_window(rows: Sequence[ScheduledCheck], *, day_zero: date, results: Iterable[date], today: date) -> Window | None:
+def next_window(
+    rows: Sequence[ScheduledCheck], *, day_zero: date, results: Iterable[date], today: date
+) -> Window | None:
     """The check of one analyte that counts on `today`, given exact days; None where the rows hold no check.
 
     `rows` are the early rows of the trigger (in any order) and at most one steady row; `results` are days on which a
@@ -56,9 +58,7 @@ def next_window(rows: Sequence[ScheduledCheck], *, day_zero: date, results: Iter
     return _early_window(early, day_zero, taken, today)
 
 
-def _early_window(
-    early: list[ScheduledCheck], day_zero: date, taken: list[date], today: date
-) -> Window | None:
+def _early_window(early: list[ScheduledCheck], day_zero: date, taken: list[date], today: date) -> Window | None:
     """The last early check whose window has opened, unless satisfied; else the next one to come."""
     windows = [_window(row, day_zero) for row in early]
     if not windows:
@@ -68,8 +68,7 @@ def _early_window(
         return windows[0]
     current = opened[-1]
     if not any(day >= current.opens for day in taken):
-        missed = sum(not any(w.opens <= day for day in taken) for w in opened[:-1])
-        return Window(row=current.row, opens=current.opens, due_by=current.due_by, grace_ends=current.grace_ends, missed_before=missed)
+        return replace(current, missed_before=_missed(opened[:-1], taken))
     coming = windows[len(opened) :]
     return coming[0] if coming else None
 
@@ -85,7 +84,14 @@ def _steady_window(
     if is_series_done:
         return _window(steady, valid[-1] if valid else day_zero)
     unsatisfied = _window(steady, valid[-1] if valid else day_zero)
-    return unsatisfied if unsatisfied.opens <= today else None
+    if unsatisfied.opens > today:
+        return None
+    return replace(unsatisfied, missed_before=_missed([_window(row, day_zero) for row in early], taken))
+
+
+def _missed(windows: Iterable[Window], taken: Sequence[date]) -> int:
+    """How many of the windows no result closed, not even a late one."""
+    return sum(not any(day >= window.opens for day in taken) for window in windows)
 
 
 def _window(row: ScheduledCheck, from_day: date) -> Window:
@@ -119,9 +125,10 @@ def possible_windows(
     """Every answer the imprecise dates allow (at most one per day day 0 may be, twice where results are imprecise)."""
     latest_zero = min(day_zero.latest, today)
     days = [day_zero.earliest + timedelta(days=n) for n in range(max(0, (latest_zero - day_zero.earliest).days) + 1)]
-    readings = [[r.earliest for r in results]]
-    if any(not r.is_day for r in results):
-        readings.append([min(r.latest, today) for r in results])
+    past = [r for r in results if r.earliest <= today]
+    readings = [[r.earliest for r in past]]
+    if any(not r.is_day for r in past):
+        readings.append([min(r.latest, today) for r in past])
     windows = [
         next_window(rows, day_zero=day, results=days_taken, today=today) for day in days for days_taken in readings
     ]

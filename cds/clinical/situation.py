@@ -86,14 +86,18 @@ def _gates(record: PatientRecord, phenotype: Phenotype, tables: ClinicalTables, 
         gates.append(Gate(id="under-age", closes=_EVERYTHING, words=words, source=record.patient))
     transplant = _present(record, groups.transplant)
     if transplant is not None:
-        gates.append(Gate(id="heart-transplant", closes=_ALL_BUT_SAFETY, words="Heart transplant on record.", source=transplant))
+        gates.append(
+            Gate(id="heart-transplant", closes=_ALL_BUT_SAFETY, words="Heart transplant on record.", source=transplant)
+        )
     lvad = _lvad(record, tables)
     if lvad is not None:
         words = "A left ventricular assist device is on record."
         gates.append(Gate(id="lvad", closes=_ALL_BUT_SAFETY, words=words, source=lvad))
     hospice = _present(record, groups.hospice)
     if hospice is not None:
-        gates.append(Gate(id="hospice", closes=_ALL_BUT_SAFETY, words="Hospice or comfort care is on record.", source=hospice))
+        gates.append(
+            Gate(id="hospice", closes=_ALL_BUT_SAFETY, words="Hospice or comfort care is on record.", source=hospice)
+        )
     dialysis = _dialysis(record, tables, today)
     if dialysis is not None:
         words = "The patient is on dialysis: eGFR and the timed kidney tests mean nothing here."
@@ -101,7 +105,10 @@ def _gates(record: PatientRecord, phenotype: Phenotype, tables: ClinicalTables, 
     closed_by_kind = {
         "none": (_EVERYTHING, "No sign of heart failure, and the ejection fraction is not low."),
         "high-output": (frozenset({"therapy", "dose"}), "High-output heart failure: the usual therapies do not apply."),
-        "right-sided": (frozenset({"therapy", "dose"}), "Right-sided heart failure alone: the usual therapies do not apply."),
+        "right-sided": (
+            frozenset({"therapy", "dose"}),
+            "Right-sided heart failure alone: the usual therapies do not apply.",
+        ),
     }
     closed = closed_by_kind.get(phenotype.kind)
     if closed is not None:
@@ -115,7 +122,11 @@ def _present(record: PatientRecord, concepts: frozenset[str]) -> str | None:
     if problems:
         return problems[0].source
     return next(
-        (item.source for item in record.procedures_devices if item.is_active and not concepts.isdisjoint(item.concepts)),
+        (
+            item.source
+            for item in record.procedures_devices
+            if item.is_active and not concepts.isdisjoint(item.concepts)
+        ),
         None,
     )
 
@@ -123,7 +134,9 @@ def _present(record: PatientRecord, concepts: frozenset[str]) -> str | None:
 def _lvad(record: PatientRecord, tables: ClinicalTables) -> str | None:
     """An assist device that was not taken out after it was put in."""
     groups = tables.concepts
-    removals = [i.done.latest for i in record.procedures_devices if i.done and not groups.lvad_removal.isdisjoint(i.concepts)]
+    removals = [
+        i.done.latest for i in record.procedures_devices if i.done and not groups.lvad_removal.isdisjoint(i.concepts)
+    ]
     last_removal = max(removals, default=None)
     for item in record.procedures_devices:
         if item.is_active and not groups.lvad.isdisjoint(item.concepts):
@@ -137,7 +150,11 @@ def _lvad(record: PatientRecord, tables: ClinicalTables) -> str | None:
 def _dialysis(record: PatientRecord, tables: ClinicalTables, today: date) -> str | None:
     """Dependence or end-stage disease on the problem list, or a recent session; none after a kidney transplant."""
     groups = tables.concepts
-    transplants = [i.done.latest for i in record.procedures_devices if i.done and not groups.kidney_transplant.isdisjoint(i.concepts)]
+    transplants = [
+        i.done.latest
+        for i in record.procedures_devices
+        if i.done and not groups.kidney_transplant.isdisjoint(i.concepts)
+    ]
     last_transplant = max(transplants, default=None)
 
     def is_before_transplant(day: date | None) -> bool:

@@ -77,6 +77,7 @@ class Limit:
 
     `also_value` and `also_unit` give the limit as printed in the other unit; the unit of the report decides.
     `drugs` narrows the row to some members of the classes; `sex` to one sex; `unless` names concepts that lift it.
+    A block with `repeat_within_days` asks for the value to be measured again.
     """
 
     id: str
@@ -94,6 +95,7 @@ class Limit:
     sex: Literal["male", "female"] | None = None
     phenotypes: tuple[str, ...] = ()
     unless: tuple[str, ...] = ()
+    repeat_within_days: int | None = None
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -155,25 +157,25 @@ class Needed:
 class Unstable:
     """What makes a measurement go stale sooner: a limit on the last value, or a recent problem."""
 
-    analyte: str | None
-    sign: Sign | None
-    value: float | None
-    unit: str | None
-    concepts: tuple[str, ...]
-    within_days: int | None
     basis: Basis
+    analyte: str | None = None
+    sign: Sign | None = None
+    value: float | None = None
+    unit: str | None = None
+    concepts: tuple[str, ...] = ()
+    within_days: int | None = None
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class ReactionReach:
     """How far a recorded reaction to one drug reaches: to whom, with which effect."""
 
-    reactions: tuple[str, ...]  # empty: none recorded
-    to_classes: tuple[str, ...]  # classes of the drug that caused it; empty: any
     reaches: tuple[str, ...]  # classes it stands against besides the named drug
     effect: Effect
     words: str
     basis: Basis
+    reactions: tuple[str, ...] = ()  # empty: none recorded
+    to_classes: tuple[str, ...] = ()  # classes of the drug that caused it; empty: any
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -229,7 +231,7 @@ class DrugClass:
     name: str  # "ACE inhibitor"
     plural: str
     pillar: str | None
-    closing_drugs: tuple[str, ...]
+    closing_drugs: tuple[str, ...] = ()
     closing_regions: Mapping[str, tuple[str, ...]]  # members that close it in one region only
 
 

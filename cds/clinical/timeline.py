@@ -6,6 +6,8 @@ import calendar
 from dataclasses import dataclass
 from datetime import date, datetime, timedelta
 
+_WHOLE_CALENDAR = date.max.toordinal()  # days
+
 
 @dataclass(frozen=True, slots=True)
 class PartialDate:
@@ -52,18 +54,21 @@ class PartialDate:
         return (as_of - self.latest).days, (as_of - self.earliest).days
 
     def plus_days(self, days: float) -> PartialDate:
-        """Both ends moved by whole days (a fraction is cut off); the instant, if any, is dropped."""
-        move = timedelta(days=int(days))
+        """Both ends moved by whole days (a fraction is cut off); the instant, if any, is dropped.
+
+        What would leave the calendar stops at its first or last day.
+        """
+        move = timedelta(days=int(max(-_WHOLE_CALENDAR, min(days, _WHOLE_CALENDAR))))
         return PartialDate(_shift(self.earliest, move), _shift(self.latest, move))
 
     def __str__(self) -> str:
-        """ISO 8601 at the precision that is known: 2025, 2025-03 or 2025-03-04."""
+        """ISO 8601 at the precision that is known: 2025, 2025-03 or 2025-03-04; else 2025-03-02/2025-04-01."""
         if self.is_day:
             return self.earliest.isoformat()
-        if self.earliest.month == self.latest.month and self.earliest.year == self.latest.year:
-            return f"{self.earliest:%Y-%m}"
+        if self == PartialDate.of_month(self.earliest.year, self.earliest.month):
+            return self.earliest.isoformat()[:7]
         if self == PartialDate.of_year(self.earliest.year):
-            return f"{self.earliest:%Y}"
+            return self.earliest.isoformat()[:4]
         return f"{self.earliest.isoformat()}/{self.latest.isoformat()}"
 
 

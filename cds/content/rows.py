@@ -5,7 +5,7 @@ from __future__ import annotations
 import types
 from collections.abc import Mapping
 from dataclasses import MISSING, fields, is_dataclass
-from functools import lru_cache
+from functools import cache
 from typing import Any, Literal, TypeVar, Union, get_args, get_origin, get_type_hints
 
 from cds.clinical.tables import Basis
@@ -15,8 +15,8 @@ Row = TypeVar("Row")
 _BASIS_KEYS = ("source", "locator", "checked", "basis")
 
 
-@lru_cache(maxsize=None)
-def _hints(row_type: type) -> dict[str, Any]:
+@cache
+def _hints(row_type: Any) -> dict[str, Any]:
     return get_type_hints(row_type)
 
 
@@ -25,7 +25,8 @@ def make_row(row_type: type[Row], raw: Mapping[str, Any], *, table: str, name: s
 
     The keys source, locator, checked and basis become one `Basis`; a missing mapping becomes an empty one.
     """
-    hints = _hints(row_type)
+    kind: Any = row_type  # a class is hashable, whatever its instances are
+    hints = _hints(kind)
     values: dict[str, Any] = {}
     left = dict(raw)
     if "basis" in hints:
@@ -59,7 +60,12 @@ def _basis(left: dict[str, Any], *, table: str, name: str, sources: frozenset[st
     kind = raw["basis"] or "source"
     if kind not in ("source", "policy"):
         raise ContentError(table, name, "'basis' must be \"policy\" or absent", "Correct it.")
-    return Basis(source=raw["source"], locator=raw["locator"], checked=raw["checked"], kind=kind)
+    return Basis(
+        source=raw["source"],
+        locator=raw["locator"],
+        checked=raw["checked"],
+        kind="policy" if kind == "policy" else "source",
+    )
 
 
 def _is_mapping(hint: Any) -> bool:

@@ -46,11 +46,11 @@ def match_allergy(
         merged = merge(found)
         return replace(merged, display=display or merged.display)
     for text in texts:
-        row = names.read(text, negations=_DENIALS)
+        named = names.read(text, negations=_DENIALS)
         meant = classes.held(text)
-        if row is None and not meant:
+        if named is None and not meant:
             continue
-        match = _of_drugs(row) if row is not None else AllergyMatch()
+        match = _of_drugs(named) if named is not None else AllergyMatch()
         return replace(
             match,
             drug_classes=_once(match.drug_classes, meant),
@@ -77,8 +77,8 @@ def merge(found: Iterable[AllergyMatch]) -> AllergyMatch:
 
 
 def _by_code(coding: Coding, allergies: AllergyCodes, drugs: DrugCodes) -> AllergyMatch | None:
-    if (row := allergies.row(coding)) is not None:
-        return row
+    if (known := allergies.row(coding)) is not None:
+        return known
     drug = drugs.row(coding)
     return None if drug is None else _of_drugs(drug)
 

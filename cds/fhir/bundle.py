@@ -83,10 +83,10 @@ def split_by_patient(document: dict[str, Any], limits: Limits) -> SplitInput:
     opened = open_document(document, limits)
     entries, repeats = newest_of_each(opened)
     unowned = list(opened.issues)
-    directory = _Directory(entries)
     refused = frozenset(
         name for name, issue in repeats.items() if name.startswith("Patient/") and issue.severity == "refused"
     )
+    directory = _Directory(entries, [e for e in opened.entries if e.type == "Patient" and e.name in refused])
     if not directory.patients and not refused:
         unowned.append(_no_patient(document))
         unused = sum(1 for entry in entries if entry.type not in USED_TYPES)
@@ -118,13 +118,15 @@ class _Group:
 class _Directory:
     """Finds entries by reference, fullUrl and identifier, and the Patient each belongs to. Built once, then only read."""
 
-    def __init__(self, entries: list[Entry]) -> None:
+    def __init__(self, entries: list[Entry], refused: Iterable[Entry] = ()) -> None:
+        """`refused` Patients are never found, but what could mean one of them is not taken to mean another."""
         self._by_name = {entry.name: entry for entry in entries}
         self._by_url: dict[str, Entry] = {}
         self._by_identifier: dict[tuple[str, str], list[Entry]] = defaultdict(list)
-        clashing = Counter(url for entry in entries for url in entry.urls)
+        clashing = Counter(url for entry in (*entries, *refused) for url in entry.urls)
         for entry in entries:
             self._by_url.update({url: entry for url in entry.urls if clashing[url] == 1})
+        for entry in (*entries, *refused):
             if entry.type in ("Patient", "Medication"):
                 for pair in set(identifiers_of(entry.resource)):
                     self._by_identifier[pair].append(entry)
@@ -152,9 +154,9 @@ class _Directory:
         if isinstance(target, (Literal, ByIdentifier)) and target.type not in ("Patient", None):
             return _issue(entry, element, "does not name a Patient", "Send what is about this one person")
         found = self.find(target, entry)
-        if found is not None and found.type == "Patient":
+        if found is not None and found.name in self.patients:
             return found.name
-        if isinstance(target, Literal) and target.key in refused:
+        if (isinstance(target, Literal) and target.key in refused) or (found is not None and found.name in refused):
             return None  # said once, for the Patient
         if isinstance(target, ByIdentifier) and len(self._by_identifier.get((target.system, target.value), ())) > 1:
             return _issue(entry, element, "has an identifier that fits several Patients", "Refer by type and id")
@@ -164,7 +166,7 @@ class _Directory:
         for element in ("subject", "patient", "beneficiary"):
             target = target_of(entry.resource.get(element))
             found = None if target is None else self.find(target, entry)
-            if found is not None and found.type == "Patient":
+            if found is not None and found.name in self.patients:
                 return found.name
         return self._only_patient
 

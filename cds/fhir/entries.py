@@ -107,7 +107,8 @@ def newest_of_each(opened: Opened) -> tuple[list[Entry], dict[str, Issue]]:
 
 
 def _newest(group: list[Entry]) -> tuple[Entry | None, Issue | None]:
-    ordered = sorted(group, key=lambda entry: _version(entry.resource), reverse=True)
+    # Where the versions tie, `meta` decides, so that the order of the entries never does.
+    ordered = sorted(group, key=lambda entry: (_version(entry.resource), repr(entry.resource.get("meta"))), reverse=True)
     first = ordered[0]
     others = [entry for entry in ordered[1:] if not _same_content(first.resource, entry.resource)]
     first = replace(
@@ -210,7 +211,18 @@ def _add(resource: object, entry: Mapping[str, Any], place: str, is_history: boo
         )
         return
     target = parse_reference(full_url) if full_url else None
-    base = target.base if isinstance(target, Literal) and target.type == kind else None
+    if isinstance(target, Literal) and target.key != f"{kind}/{identity}":
+        opened.issues.append(
+            Issue(
+                resource=f"{kind}/{identity}",
+                path="fullUrl",
+                problem="ends in another type or id than the resource has, so it is not used",
+                fix="Send a fullUrl that ends in the type and id of the resource",
+                severity="doubtful",
+            )
+        )
+        full_url = target = None
+    base = target.base if isinstance(target, Literal) else None
     opened.entries.append(Entry(kind, identity, resource, (full_url,) if full_url else (), base, is_history))
 
 

@@ -29,6 +29,8 @@ COMMAND_LINE_LIMITS = Limits(max_bytes=256 * 1024 * 1024, max_entries=200_000)  
 SERVICE_LIMITS = Limits(max_bytes=16 * 1024 * 1024, max_entries=20_000)
 
 _GZIP = b"\x1f\x8b"
+_GZIP_FORMAT = 31  # zlib's word for a gzip header and the largest window
+_PIECE = 4096
 _UTF8_MARK = b"\xef\xbb\xbf"
 _OTHER_ENCODINGS = (b"\xff\xfe", b"\xfe\xff", b"\x00\x00\xfe\xff")
 _NOT_A_NUMBER = (b"NaN", b"Infinity", b"-Infinity")
@@ -77,26 +79,38 @@ def _plain(data: bytes, limits: Limits) -> bytes:
     if len(data) > limits.max_bytes:
         raise _too_many_bytes(limits)
     text = _decompress(data, limits) if data.startswith(_GZIP) else data
+    if text.startswith(_GZIP):
+        raise InputError("the input is compressed twice", "Compress it once, or send it plain")
     return text.removeprefix(_UTF8_MARK)
 
 
 def _decompress(data: bytes, limits: Limits) -> bytes:
-    """Undo gzip, one member after the other, and stop as soon as the result is too long."""
+    """Undo gzip, one member after the other, and stop as soon as the result is too long.
+
+    Zeros after a member are padding, as the common tools take them. The data goes in piece by piece, because zlib copies
+    whatever follows a member: a million tiny members would otherwise cost the square of their number.
+    """
     parts: list[bytes] = []
-    room, rest = limits.max_bytes, data
-    while rest:
-        stream = zlib.decompressobj(wbits=31)
-        try:
-            part = stream.decompress(rest, room + 1)
-        except zlib.error:
-            raise InputError("the gzip data is damaged", "Compress the file again, or send it plain") from None
-        room -= len(part)
-        if room < 0:
-            raise _too_many_bytes(limits)
-        if not stream.eof:
-            raise InputError("the gzip data ends too early", "Send the whole file, or send it plain")
-        parts.append(part)
-        rest = stream.unused_data
+    room = limits.max_bytes
+    stream = zlib.decompressobj(wbits=_GZIP_FORMAT)
+    for start in range(0, len(data), _PIECE):
+        rest = data[start : start + _PIECE]
+        while rest:
+            if stream.eof:
+                rest = rest.lstrip(b"\x00")
+                stream = zlib.decompressobj(wbits=_GZIP_FORMAT) if rest else stream
+                continue
+            try:
+                part = stream.decompress(rest, room + 1)
+            except zlib.error:
+                raise InputError("the gzip data is damaged", "Compress the file again, or send it plain") from None
+            room -= len(part)
+            if room < 0:
+                raise _too_many_bytes(limits)
+            parts.append(part)
+            rest = stream.unused_data
+    if not stream.eof:
+        raise InputError("the gzip data ends too early", "Send the whole file, or send it plain")
     return b"".join(parts)
 
 

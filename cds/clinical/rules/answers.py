@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from datetime import date
 
-from cds.clinical.findings import Due, Evidence, Finding
+from cds.clinical.findings import Due, Evidence, Finding, TestProposal
 
 
 def not_applicable(rule: str, *, because: str, about: str | None = None, source: str | None = None) -> Finding:
@@ -24,7 +24,13 @@ def met(
 ) -> Finding:
     """It applies and it is done."""
     return Finding(
-        rule=rule, about=about, outcome="met", because=because, evidence=evidence, due=due, recommendations=recommendations
+        rule=rule,
+        about=about,
+        outcome="met",
+        because=because,
+        evidence=evidence,
+        due=due,
+        recommendations=recommendations,
     )
 
 
@@ -38,6 +44,8 @@ def blocked(
     look_again_on: date | None = None,
     refer: bool = False,
     recommendations: tuple[str, ...] = (),
+    test_proposals: tuple[TestProposal, ...] = (),
+    opened_by: tuple[str, ...] = (),
 ) -> Finding:
     """It applies, it is not done, and a recorded fact stands against it."""
     return Finding(
@@ -50,6 +58,8 @@ def blocked(
         limits=limits,
         look_again_on=look_again_on,
         recommendations=recommendations,
+        test_proposals=test_proposals,
+        opened_by=opened_by,
     )
 
 

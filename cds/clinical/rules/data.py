@@ -77,7 +77,9 @@ def _still_taken(course: DrugCourse) -> Finding:
         ),
     )
     if not course.stale:
-        return met(STILL_TAKEN, about=course.drug, because=f"The order of {course.drug} is recent enough.", evidence=evidence)
+        return met(
+            STILL_TAKEN, about=course.drug, because=f"The order of {course.drug} is recent enough.", evidence=evidence
+        )
     because = f"The order of {course.drug} is still active though it ran out long ago, and nobody ended it: is it still taken?"
     return Finding(
         rule=STILL_TAKEN,

@@ -30,12 +30,16 @@ def check_potassium_creatinine(situation: Situation) -> tuple[Finding, ...]:
     courses = [c for c in situation.courses if c.drug_class in watched and c.state in ("active", "paused", "unclear")]
     if not courses:
         return (not_applicable(RULE, because="No drug that asks for these tests is on the list."),)
-    return tuple(_check(situation, course, [r for r in rows if course.drug_class in r.drug_classes]) for course in courses)
+    return tuple(
+        _check(situation, course, [r for r in rows if course.drug_class in r.drug_classes]) for course in courses
+    )
 
 
 def _check(situation: Situation, course: DrugCourse, rows: list[ScheduledCheck]) -> Finding:
     if course.state == "paused":
-        return not_applicable(RULE, about=course.drug, because=f"{course.drug.capitalize()} is on hold: nothing falls due.")
+        return not_applicable(
+            RULE, about=course.drug, because=f"{course.drug.capitalize()} is on hold: nothing falls due."
+        )
     day_zero, trigger = _day_zero(course)
     if day_zero is None:
         return unknown(
@@ -59,8 +63,16 @@ def _check(situation: Situation, course: DrugCourse, rows: list[ScheduledCheck])
         imprecise = f"{course.source}: exact date of the start or last increase ({day_zero})"
         if day_zero.is_day:
             imprecise = f"exact dates of the last {' and '.join(tests)}"
-        because = f"{course.drug.capitalize()}: the dates are too coarse to tell whether {_names(situation, tests)} are due."
-        return unknown(RULE, about=course.drug, because=because, missing=(imprecise,), evidence=(_course_evidence(course, day_zero),))
+        because = (
+            f"{course.drug.capitalize()}: the dates are too coarse to tell whether {_names(situation, tests)} are due."
+        )
+        return unknown(
+            RULE,
+            about=course.drug,
+            because=because,
+            missing=(imprecise,),
+            evidence=(_course_evidence(course, day_zero),),
+        )
     return _not_due(situation, course, day_zero, tests, answers)
 
 
@@ -136,7 +148,11 @@ def _open(
         evidence=tuple(evidence),
         due=due,
         limits=(row.id,),
-        test_proposals=(TestProposal(tests=outstanding, not_before=due.window_opens, due_by=max(due.due_by, today), why=row.trigger),),
+        test_proposals=(
+            TestProposal(
+                tests=outstanding, not_before=due.window_opens, due_by=max(due.due_by, today), why=row.trigger
+            ),
+        ),
         opened_by=course.sources[:1],
     )
 
@@ -170,7 +186,11 @@ def _names(situation: Situation, tests: tuple[str, ...]) -> str:
 
 
 def _not_due(
-    situation: Situation, course: DrugCourse, day_zero: PartialDate, tests: tuple[str, ...], answers: dict[str, CheckAnswer]
+    situation: Situation,
+    course: DrugCourse,
+    day_zero: PartialDate,
+    tests: tuple[str, ...],
+    answers: dict[str, CheckAnswer],
 ) -> Finding:
     windows: list[tuple[Window, str]] = [(w, test) for test in tests for w in answers[test].windows if w is not None]
     evidence = [_course_evidence(course, day_zero)]
@@ -217,4 +237,3 @@ def _course_evidence(course: DrugCourse, day_zero: PartialDate | None) -> Eviden
         unit="mg/d" if dose is not None else None,
         date=str(day_zero) if day_zero is not None else None,
     )
-

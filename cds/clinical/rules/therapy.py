@@ -6,6 +6,7 @@ One finding per rule, about the pillar. The candidates, their order and every li
 from __future__ import annotations
 
 from dataclasses import dataclass
+from datetime import date, timedelta
 
 from cds.clinical.eligibility import Judgement, judge, stopping_barriers
 from cds.clinical.findings import Action, DrugProposal, Evidence, Finding, TestProposal
@@ -46,10 +47,14 @@ def _pillar(situation: Situation, rule: str, pillar: str) -> Finding:
     closing = [c for c in in_use if _closes(situation, c)]
     keeping = [c for c in closing if not stopping_barriers(situation, c.drug, c.drug_class or "")]
     if keeping:
-        return _is_met(situation, rule, pillar, keeping)
+        return _is_met(rule, pillar, keeping)
     indication, why_not = _indication(situation, rule, has_ended=any(c.state == "ended" for c in members))
     if indication is None:
-        return why_not if why_not is not None else not_applicable(rule, about=pillar, because=f"Not asked for in {situation.phenotype.name}.")
+        return (
+            why_not
+            if why_not is not None
+            else not_applicable(rule, about=pillar, because=f"Not asked for in {situation.phenotype.name}.")
+        )
     doubtful = [c for c in in_use if c not in closing and _may_close(situation, c)]
     if doubtful:
         return _which_drug(rule, pillar, doubtful[0])
@@ -67,7 +72,8 @@ def _members(situation: Situation, pillar: str) -> list[DrugCourse]:
     return [
         course
         for course in situation.courses
-        if course.drug_class in classes or (course.drug_class is None and not classes.isdisjoint(course.possible_classes))
+        if course.drug_class in classes
+        or (course.drug_class is None and not classes.isdisjoint(course.possible_classes))
     ]
 
 
@@ -92,7 +98,7 @@ def _may_close(situation: Situation, course: DrugCourse) -> bool:
     return any(closing.startswith(f"{course.drug} ") for closing in row.closing_drugs)
 
 
-def _is_met(situation: Situation, rule: str, pillar: str, courses: list[DrugCourse]) -> Finding:
+def _is_met(rule: str, pillar: str, courses: list[DrugCourse]) -> Finding:
     names = " and ".join(course.drug for course in courses)
     verb = "is" if len(courses) == 1 else "are"
     because = f"{names[0].upper()}{names[1:]} {verb} on the medication list{_since(courses[0])}."
@@ -107,14 +113,16 @@ def _which_drug(rule: str, pillar: str, course: DrugCourse) -> Finding:
         because = f"The codes of one medicine disagree on its class ({' or '.join(course.possible_classes)})."
         missing = (f"{course.source}: which medicine it is",)
     else:
-        because = f"{course.drug.capitalize()} is on the list, but not which salt: only one of them treats heart failure."
+        because = (
+            f"{course.drug.capitalize()} is on the list, but not which salt: only one of them treats heart failure."
+        )
         missing = (f"{course.source}: the salt of {course.drug}",)
-    return unknown(rule, about=pillar, because=because, missing=missing, evidence=(_course_evidence(course, "missing"),))
+    return unknown(
+        rule, about=pillar, because=because, missing=missing, evidence=(_course_evidence(course, "missing"),)
+    )
 
 
-def _indication(
-    situation: Situation, rule: str, *, has_ended: bool
-) -> tuple[Indication | None, Finding | None]:
+def _indication(situation: Situation, rule: str, *, has_ended: bool) -> tuple[Indication | None, Finding | None]:
     """The row that asks for the class in this patient, or the finding that says why none does."""
     phenotype = situation.phenotype
     rows = [row for row in situation.tables.indications if row.rule == rule and phenotype.kind in row.phenotypes]
@@ -138,7 +146,11 @@ def _indication(
             missing = ("NYHA class",)
             because = "The recommendation is for NYHA class II to IV, and neither a recent class nor a loop diuretic or admission is recorded."
             return None, unknown(
-                rule, about=about, because=because, missing=missing, evidence=(Evidence(what="nyha-class", role="missing"),)
+                rule,
+                about=about,
+                because=because,
+                missing=missing,
+                evidence=(Evidence(what="nyha-class", role="missing"),),
             )
     if rows and any(row.needs_nyha for row in rows):
         nyha_reading = situation.nyha()
@@ -176,7 +188,9 @@ def _absent(
     """No member closes the pillar: paused, another agent, or nothing. Say what may be done."""
     recommendations = (indication.recommendation,)
     paused = [course for course in members if course.state == "paused"]
-    opened_by = tuple(e.resource for e in situation.phenotype.evidence if e.resource and not e.resource.startswith("Observation/"))
+    opened_by = tuple(
+        e.resource for e in situation.phenotype.evidence if e.resource and not e.resource.startswith("Observation/")
+    )
     if paused:
         reason = f" ({', '.join(paused[0].reasons)})" if paused[0].reasons else " (no reason recorded)"
         because = f"{paused[0].drug.capitalize()} is on hold{reason}: restart, or say why not."
@@ -193,7 +207,9 @@ def _absent(
     candidates = _candidates(situation, rule)
     judgements = [judge(situation, candidate.drug, candidate.drug_class) for candidate in candidates]
     if not judgements:
-        return not_applicable(rule, about=pillar, because="No drug of the class is listed for this region and kind of heart failure.")
+        return not_applicable(
+            rule, about=pillar, because="No drug of the class is listed for this region and kind of heart failure."
+        )
     own = {candidate.drug: candidate.recommendation for candidate in candidates if candidate.recommendation}
     absence = _Absence(indication, own, [c for c in in_use if not _closes(situation, c)], members, opened_by)
     return _decide(situation, rule, pillar, absence, judgements)
@@ -229,9 +245,7 @@ def _candidates(situation: Situation, rule: str) -> list[Candidate]:
     return found
 
 
-def _decide(
-    situation: Situation, rule: str, pillar: str, absence: _Absence, judgements: list[Judgement]
-) -> Finding:
+def _decide(situation: Situation, rule: str, pillar: str, absence: _Absence, judgements: list[Judgement]) -> Finding:
     """The best answer any candidate has: start, else review, else unknown, else blocked."""
     startable = [j for j in judgements if j.answer == "start"]
     reviewable = [j for j in judgements if j.answer == "review"]
@@ -266,9 +280,29 @@ def _decide(
         because=f"{intro} Against it: {reasons}.",
         evidence=_unique(evidence),
         limits=limits,
+        look_again_on=_look_again_on(situation, judgements),
         refer=any(j.needs_referral for j in judgements),
         recommendations=(absence.indication.recommendation,),
+        test_proposals=_repeats(situation, judgements),
+        opened_by=absence.opened_by,
     )
+
+
+def _repeats(situation: Situation, judgements: list[Judgement]) -> tuple[TestProposal, ...]:
+    """The values that stand against the class and should be measured again."""
+    wanted = {analyte: days for j in judgements for analyte, days in j.to_repeat.items()}
+    today = situation.today
+    return tuple(
+        TestProposal(tests=(analyte,), not_before=None, due_by=today + timedelta(days=days), why="to look again")
+        for analyte, days in sorted(wanted.items())
+    )
+
+
+def _look_again_on(situation: Situation, judgements: list[Judgement]) -> date | None:
+    """The first day on which a block may be gone: a waiting time is over, or a value has been repeated."""
+    days = [day for j in judgements for day in j.look_again]
+    days += [proposal.due_by for proposal in _repeats(situation, judgements)]
+    return min(days, default=None)
 
 
 def _open(
@@ -354,7 +388,9 @@ def _proposals(
         return ()
     if not wrong:
         return tuple(start_proposal(situation, j.drug) for j in chosen)
-    return tuple(_in_place_of(j.drug, wrong[0]) for j in sorted(chosen, key=lambda j: not _same_ingredient(j.drug, wrong[0])))
+    return tuple(
+        _in_place_of(j.drug, wrong[0]) for j in sorted(chosen, key=lambda j: not _same_ingredient(j.drug, wrong[0]))
+    )
 
 
 def _same_ingredient(drug: str, course: DrugCourse) -> bool:

@@ -1,0 +1,149 @@
+"""The one path: bytes -> resources -> record -> findings -> cards with drafts. Command, service and audit all call it."""
+
+from __future__ import annotations
+
+from datetime import UTC, datetime, time, tzinfo
+from typing import Any
+
+from cds.cards.card import Card
+from cds.cards.folding import make_cards
+from cds.cards.shape import card_shape, finding_shape, gate_shape, held_back_shape, phenotype_shape
+from cds.clinical.evaluate import findings_in
+from cds.clinical.situation import Situation, understand
+from cds.content.load import Content
+from cds.errors import Issue
+from cds.fhir.build_record import BuiltRecord, build_record
+from cds.fhir.bundle import PatientResources, SplitInput, split_by_patient
+from cds.fhir.drafts import drug_draft, test_draft
+from cds.fhir.reading import COMMAND_LINE_LIMITS, Limits, read_json
+from cds.fhir.record_shape import course_issues, issue_shape, record_shape
+
+FORMAT_VERSION = "1.0"
+
+
+def assess(
+    data: bytes,
+    content: Content,
+    *,
+    as_of: datetime,
+    trace: bool = False,
+    limits: Limits = COMMAND_LINE_LIMITS,
+) -> dict[str, Any]:
+    """Assess every patient of a Bundle (or of a single resource) and return the assessment as plain data.
+
+    Calendar days are days in the zone of `as_of`. With `trace` every finding is listed. Equal input, content and `as_of`
+    give equal output. Raises InputError (and its kinds) for input that cannot be read as a whole; everything else that
+    is wrong with the input is an issue in the answer. Without a Patient there are no assessments, only issues.
+    """
+    split = split_by_patient(read_json(data, limits), limits)
+    built = [_built(patient, content, as_of) for patient in split.patients]
+    return {
+        "format": "gdmt-cards/assessment",
+        **_frame(content, as_of),
+        "assessments": [
+            assess_patient(one, content, as_of=as_of, trace=trace) for one in built if one.record is not None
+        ],
+        "issues": _unowned(split, built),
+    }
+
+
+def describe_records(
+    data: bytes, content: Content, *, as_of: datetime, limits: Limits = COMMAND_LINE_LIMITS
+) -> dict[str, Any]:
+    """Return what was understood of each patient's data as known on `as_of`. Raises as `assess` does."""
+    split = split_by_patient(read_json(data, limits), limits)
+    built = [_built(patient, content, as_of) for patient in split.patients]
+    return {
+        "format": "gdmt-cards/record",
+        **_frame(content, as_of),
+        "records": [_record(one, content, as_of) for one in built if one.record is not None],
+        "issues": _unowned(split, built),
+    }
+
+
+def assess_patient(built: BuiltRecord, content: Content, *, as_of: datetime, trace: bool = False) -> dict[str, Any]:
+    """Assess one patient whose record was built. The record must not be refused."""
+    if built.record is None:
+        raise ValueError("a refused patient has no record to assess")
+    situation = understand(built.record, content.tables, as_of=as_of)
+    findings = findings_in(situation)
+    made = make_cards(situation, findings, content.wording)
+    issues = [*built.issues, *course_issues(situation.courses)]
+    return {
+        "patient": built.patient,
+        "phenotype": phenotype_shape(situation.phenotype),
+        "gates": [gate_shape(gate) for gate in situation.gates],
+        "cards": [card_shape(card, _drafts(card, situation, content), content.wording) for card in made.cards],
+        "held_back": [held_back_shape(item) for item in made.held_back],
+        **({"findings": [finding_shape(finding) for finding in findings]} if trace else {}),
+        "intake": {
+            "read": built.read,
+            "not_needed": built.not_needed,
+            "issues": [issue_shape(issue) for issue in issues],
+        },
+    }
+
+
+def _frame(content: Content, as_of: datetime) -> dict[str, Any]:
+    return {
+        "format_version": FORMAT_VERSION,
+        "as_of": shown_moment(as_of),
+        "content": {
+            "version": content.version,
+            "sha256": content.sha256,
+            "site": None,
+            "signed_off": None,
+            "notice": content.wording.notice,
+        },
+    }
+
+
+def shown_moment(as_of: datetime) -> str:
+    """The moment as it was asked for: a date where it is the end of a day, else an instant."""
+    return as_of.date().isoformat() if as_of.time() == time.max else as_of.isoformat(timespec="seconds")
+
+
+def _built(patient: PatientResources, content: Content, as_of: datetime) -> BuiltRecord:
+    zone: tzinfo = as_of.tzinfo if as_of.tzinfo is not None else UTC
+    return build_record(patient, content.codes, zone)
+
+
+def _record(built: BuiltRecord, content: Content, as_of: datetime) -> dict[str, Any]:
+    if built.record is None:
+        raise ValueError("a refused patient has no record to show")
+    situation = understand(built.record, content.tables, as_of=as_of)
+    issues = [*built.issues, *course_issues(situation.courses)]
+    return record_shape(situation.record, situation.courses, issues, built.not_recognised, on=as_of.date())
+
+
+def _drafts(card: Card, situation: Situation, content: Content) -> list[dict[str, Any]]:
+    patient, today = situation.record.patient, situation.today
+    reasons = [fact.resource for fact in card.evidence if fact.resource is not None]
+    drugs = [
+        drug_draft(proposal, content.order_codes, patient=patient, authored_on=today, reasons=reasons)
+        for proposal in card.drug_proposals
+    ]
+    tests = [
+        test_draft(
+            proposal,
+            test,
+            content.wording.name(test),
+            content.order_codes,
+            patient=patient,
+            authored_on=today,
+            reasons=reasons,
+        )
+        for proposal in card.test_proposals
+        for test in proposal.tests
+        if card.due is None or card.due.already_ordered is None
+    ]
+    return [*drugs, *tests]
+
+
+def _unowned(split: SplitInput, built: list[BuiltRecord]) -> list[dict[str, Any]]:
+    """The issues that belong to no assessed patient: of the whole input, and of patients that were refused."""
+    issues: list[Issue] = [*split.issues]
+    for one in built:
+        if one.record is None:
+            issues.extend(one.issues)
+    return [issue_shape(issue) for issue in issues]

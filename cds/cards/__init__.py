@@ -1,0 +1,1 @@
+"""Findings -> cards: wording, folding, order. Pure: no file, clock, JSON or FHIR."""

@@ -1,0 +1,167 @@
+"""Findings -> few cards. What asks for the same thing is one card; what was folded is listed with the card it went into.
+
+Cards come from open findings, from unknown ones (they name what is missing), and from blocked ones that ask for
+something: a value to be repeated, or a specialist.
+"""
+
+from __future__ import annotations
+
+from collections import defaultdict
+from collections.abc import Iterable, Sequence
+from dataclasses import dataclass, replace
+from datetime import timedelta
+
+from cds.cards.card import TIERS, Card, HeldBack, card_id
+from cds.cards.ordering import card_order, held_back_order, tier_of, urgency
+from cds.cards.wording import Wording, bases, headline, named_evidence, wanted_names
+from cds.clinical.findings import Evidence, Finding, TestProposal
+from cds.clinical.situation import Situation
+
+_ONE_CARD_A_RULE = ("check-potassium-creatinine", "confirm-still-taken")
+_EJECTION_FRACTION = "ejection-fraction-missing"
+
+
+@dataclass(frozen=True, slots=True)
+class CardSet:
+    """The cards to show, most urgent first, and those held back."""
+
+    cards: tuple[Card, ...]
+    held_back: tuple[HeldBack, ...]
+
+
+def make_cards(situation: Situation, findings: Sequence[Finding], wording: Wording) -> CardSet:
+    """Make the cards of one patient from all findings of one assessment. Never two cards that ask for the same thing."""
+    groups: dict[tuple[str, ...], list[Finding]] = defaultdict(list)
+    for finding in findings:
+        key = _group(finding)
+        if key is not None:
+            groups[key].append(finding)
+    cards: list[Card] = []
+    held_back: list[HeldBack] = []
+    for group in _absorb(groups):
+        ordered = sorted(group, key=lambda f: (_strength(f), urgency(f)))
+        card = _card(situation, ordered, wording)
+        cards.append(card)
+        held_back.extend(
+            HeldBack(
+                card_id=card_id(situation.record.patient, finding),
+                rule=finding.rule,
+                about=finding.about,
+                reason="folded",
+                into=card.card_id,
+            )
+            for finding in ordered[1:]
+        )
+    return CardSet(tuple(sorted(cards, key=card_order)), tuple(sorted(held_back, key=held_back_order)))
+
+
+def _group(finding: Finding) -> tuple[str, ...] | None:
+    """Which card a finding goes to; None where it makes none."""
+    match finding.outcome:
+        case "open":
+            if finding.rule in (*_ONE_CARD_A_RULE, _EJECTION_FRACTION):
+                return "open", finding.rule
+            return "open", finding.rule, finding.about or ""
+        case "unknown":
+            if "left ventricular ejection fraction" in finding.missing:
+                return "open", _EJECTION_FRACTION
+            if finding.test_proposals:
+                return "needed", "tests"
+            return "needed", finding.rule, *finding.missing
+        case "blocked":
+            if finding.action == "refer":
+                return "blocked", "refer"
+            return ("blocked", "repeat") if finding.test_proposals else None
+        case _:
+            return None
+
+
+def _absorb(groups: dict[tuple[str, ...], list[Finding]]) -> Iterable[list[Finding]]:
+    """Let a card that already asks for tests take in the findings that wait for no other test."""
+    asked = groups.get(("open", "check-potassium-creatinine"))
+    waiting = [key for key in (("needed", "tests"), ("blocked", "repeat")) if key in groups]
+    taker = asked
+    for key in waiting:
+        if taker is None:
+            taker = groups[key]
+            continue
+        taken = [f for f in groups[key] if _tests(f) <= set().union(*(_tests(t) for t in taker))]
+        taker.extend(taken)
+        groups[key] = [f for f in groups[key] if f not in taken]
+    return [group for group in groups.values() if group]
+
+
+def _tests(finding: Finding) -> set[str]:
+    return {test for proposal in finding.test_proposals for test in proposal.tests}
+
+
+def _strength(finding: Finding) -> int:
+    return ("open", "unknown", "blocked").index(finding.outcome)
+
+
+def _card(situation: Situation, findings: list[Finding], wording: Wording) -> Card:
+    """One card; the first finding leads it, gives its id, rule and due date."""
+    first = findings[0]
+    key = first.action if first.action is not None else first.outcome
+    words = wording.cards[first.rule, key]
+    alike = [f for f in findings if f.rule == first.rule or f.outcome == first.outcome]
+    subjects = [f.about for f in alike if f.about is not None]
+    wanted = [name for f in alike for name in wanted_names(f, wording)]
+    tier = min((tier_of(wording.cards[f.rule, f.action or f.outcome].tier, f) for f in alike), key=TIERS.index)
+    evidence = named_evidence((fact for f in findings for fact in f.evidence), wording)
+    basis = bases(findings, wording)
+    cautions = _cautions(situation, findings, any(b.checked == "memory" for b in basis), wording)
+    return Card(
+        card_id=card_id(situation.record.patient, first),
+        rule=first.rule,
+        about=first.about,
+        family=words.family,
+        tier=tier,
+        headline=headline(words, first, subjects, wanted, wording),
+        because=tuple(dict.fromkeys(f.because for f in findings)),
+        evidence=_without_repeats(evidence),
+        basis=basis,
+        due=first.due,
+        drug_proposals=first.drug_proposals,
+        test_proposals=_joined(findings),
+        cautions=cautions,
+        expires_on=situation.today + timedelta(days=wording.shown_for_days[tier]),
+    )
+
+
+def _joined(findings: list[Finding]) -> tuple[TestProposal, ...]:
+    """Each test once, on its earliest date."""
+    found: dict[str, TestProposal] = {}
+    for finding in findings:
+        for proposal in finding.test_proposals:
+            for test in proposal.tests:
+                known = found.get(test)
+                if known is None or proposal.due_by < known.due_by:
+                    found[test] = replace(proposal, tests=(test,))
+    return tuple(found.values())
+
+
+def _without_repeats(evidence: tuple[Evidence, ...]) -> tuple[Evidence, ...]:
+    """One entry a fact: where the same one limits and supports, what it limits is said."""
+    rank = {"limits": 0, "stale": 1, "missing": 2, "supports": 3}
+    best: dict[tuple[object, ...], Evidence] = {}
+    for fact in evidence:
+        key = fact.what, fact.resource, fact.value, fact.unit
+        known = best.get(key)
+        if known is None or rank[fact.role] < rank[known.role]:
+            best[key] = fact
+    return tuple(best.values())
+
+
+def _cautions(situation: Situation, findings: list[Finding], is_from_memory: bool, wording: Wording) -> tuple[str, ...]:
+    keys = [key for finding in findings for key in finding.cautions]
+    if any(finding.drug_proposals or finding.test_proposals for finding in findings):
+        keys.append("draft")
+    cited = {fact.resource for finding in findings for fact in finding.evidence}
+    if any(course.matched_by == "text" and not cited.isdisjoint(course.sources) for course in situation.courses):
+        keys.append("unsure-code")
+    if is_from_memory:
+        keys.append("memory")
+    keys.append("every-card")
+    texts = [wording.cautions[key] for key in dict.fromkeys(keys) if key in wording.cautions]
+    return (*texts, wording.notice)

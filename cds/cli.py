@@ -1,0 +1,170 @@
+"""The command `gdmt-cards`. Reads files and the clock, writes JSON on stdout and messages on stderr; decides nothing else.
+
+Imports of the program itself stand inside the commands, so that `--help` is quick.
+"""
+
+from __future__ import annotations
+
+import sys
+from collections.abc import Callable
+from datetime import datetime, tzinfo
+from typing import Any, NoReturn
+
+import click
+
+EXIT_CODES = """\b
+Exit codes:
+  0   done; what could not be used is listed as issues
+  2   wrong use of the command
+  10  the input cannot be read as a whole
+  11  with --strict: at least one resource was refused
+  12  the input is larger, longer or deeper than allowed
+  13  the input holds no patient that can be assessed
+  20  our own tables are wrong
+  70  an error of the program itself
+"""
+_STRICT, _NO_PATIENT, _OWN_ERROR = 11, 13, 70
+
+
+@click.group(context_settings={"help_option_names": ["-h", "--help"]}, epilog=EXIT_CODES)
+@click.version_option(package_name="gdmt-cards", prog_name="gdmt-cards")
+def main() -> None:
+    """Heart-failure decision support: FHIR R4 bundles in, recommendation cards out.
+
+    Advice for licensed clinicians; content is not clinically signed off.
+    """
+
+
+def _input_options(command: Callable[..., None]) -> Callable[..., None]:
+    """Give `command` the argument and the options that every command reading a Bundle has."""
+    for decorate in (
+        click.option("--strict", is_flag=True, help="Exit with 11 if any resource was refused."),
+        click.option(
+            "--zone",
+            default="UTC",
+            show_default=True,
+            metavar="NAME",
+            envvar="GDMT_CARDS_ZONE",
+            help="Time zone (IANA name) whose calendar days count.",
+        ),
+        click.option(
+            "--as-of",
+            "as_of",
+            metavar="DATE",
+            help="The moment to assess: YYYY-MM-DD (its end) or an instant with zone. Default: now.",
+        ),
+        click.argument("bundle", type=click.Path(exists=True, dir_okay=False, allow_dash=True), metavar="BUNDLE.json"),
+    ):
+        command = decorate(command)
+    return command
+
+
+@main.command(epilog=EXIT_CODES)
+@_input_options
+@click.option("--trace", is_flag=True, help="List every rule's finding, not only the cards.")
+def assess(bundle: str, as_of: str | None, zone: str, strict: bool, trace: bool) -> None:
+    """Assess each patient of BUNDLE.json (or of standard input, "-") and print their cards as JSON."""
+
+    def work(data: bytes, moment: datetime) -> dict[str, Any]:
+        from cds import assessment
+        from cds.content.load import load_content
+
+        return assessment.assess(data, load_content(), as_of=moment, trace=trace)
+
+    _run(work, bundle, as_of, zone, strict=strict)
+
+
+@main.command(epilog=EXIT_CODES)
+@_input_options
+def record(bundle: str, as_of: str | None, zone: str, strict: bool) -> None:
+    """Print what was understood of each patient's data in BUNDLE.json, and what was not, as JSON."""
+
+    def work(data: bytes, moment: datetime) -> dict[str, Any]:
+        from cds import assessment
+        from cds.content.load import load_content
+
+        return assessment.describe_records(data, load_content(), as_of=moment)
+
+    _run(work, bundle, as_of, zone, strict=strict)
+
+
+def _run(
+    work: Callable[[bytes, datetime], dict[str, Any]], bundle: str, as_of: str | None, zone: str, *, strict: bool
+) -> None:
+    """Read, work, print; turn every error into a message and its exit code."""
+    from cds.errors import CdsError
+
+    moment = _moment(as_of, zone)
+    try:
+        answer = work(_read(bundle), moment)
+    except CdsError as error:
+        _stop(str(error), error.exit_code)
+    except Exception as error:  # noqa: BLE001 - the last resort: a traceback could show a patient's values
+        where = _place_of(error)
+        _stop(f"an error of the program itself ({type(error).__name__} at {where}).\nPlease report it with this line.", _OWN_ERROR)
+    _print(answer)
+    refused = _refused(answer)
+    if not answer.get("assessments", answer.get("records")):
+        _stop("the input holds no patient that can be assessed.\nSend each Patient in the same Bundle; see the issues.", _NO_PATIENT)
+    if strict and refused:
+        _stop(f"{refused} resources or values were refused.\nSee the issues with severity \"refused\".", _STRICT)
+
+
+def _moment(as_of: str | None, zone: str) -> datetime:
+    from cds.fhir.dates import DateNotUnderstood, parse_as_of
+
+    where = _zone(zone)
+    if as_of is None:
+        return datetime.now(where)
+    try:
+        return parse_as_of(as_of, where)
+    except DateNotUnderstood as error:
+        raise click.BadParameter(f"it {error.problem}.", param_hint="--as-of") from None
+
+
+def _zone(name: str) -> tzinfo:
+    from zoneinfo import ZoneInfo, ZoneInfoNotFoundError
+
+    try:
+        return ZoneInfo(name)
+    except (ZoneInfoNotFoundError, ValueError, OSError):
+        raise click.BadParameter("it is no IANA time zone name, such as Europe/Vienna.", param_hint="--zone") from None
+
+
+def _read(bundle: str) -> bytes:
+    """Read at most one byte more than allowed, so that a huge input is refused without being held."""
+    from cds.fhir.reading import COMMAND_LINE_LIMITS
+
+    with click.open_file(bundle, "rb") as stream:
+        data: bytes = stream.read(COMMAND_LINE_LIMITS.max_bytes + 1)
+    return data
+
+
+def _print(answer: dict[str, Any]) -> None:
+    import orjson
+
+    sys.stdout.buffer.write(orjson.dumps(answer, option=orjson.OPT_INDENT_2 | orjson.OPT_APPEND_NEWLINE))
+    sys.stdout.buffer.flush()
+
+
+def _refused(answer: dict[str, Any]) -> int:
+    """Count the refusals in an answer, of whatever patient."""
+    issues = [*answer["issues"]]
+    for one in answer.get("assessments", ()):
+        issues += one["intake"]["issues"]
+    for one in answer.get("records", ()):
+        issues += one["issues"]
+    return sum(issue["severity"] == "refused" for issue in issues)
+
+
+def _place_of(error: Exception) -> str:
+    """Module and line of the innermost frame; never its values."""
+    trace = error.__traceback__
+    while trace is not None and trace.tb_next is not None:
+        trace = trace.tb_next
+    return "?" if trace is None else f"{trace.tb_frame.f_globals.get('__name__', '?')}:{trace.tb_lineno}"
+
+
+def _stop(message: str, code: int) -> NoReturn:
+    click.echo(f"gdmt-cards: {message}", err=True)
+    raise SystemExit(code)

@@ -107,6 +107,8 @@ def _hold_barrier(situation: Situation, barrier: Barrier, judgement: Judgement, 
         )
         return
     if not barrier.history and wanted.isdisjoint(present):
+        if barrier.hints:
+            _hold_hint(situation, barrier, wanted, judgement)
         return
     for problem in situation.record.problems:
         if wanted.isdisjoint(problem.concepts) or not (barrier.history or problem.is_active):
@@ -122,6 +124,15 @@ def _hold_barrier(situation: Situation, barrier: Barrier, judgement: Judgement, 
         if not wanted.isdisjoint(item.concepts) and item.is_active:
             evidence = [Evidence(what=item.display, role="limits", resource=item.source, date=_text(item.done))]
             _apply(barrier, barrier.effect, barrier.words, judgement, evidence)
+            return
+
+
+def _hold_hint(situation: Situation, barrier: Barrier, wanted: frozenset[str], judgement: Judgement) -> None:
+    """Ask for a review where a problem may be what the barrier is about, but its code does not say so for certain."""
+    for problem in situation.record.problems:
+        if problem.is_active and not wanted.isdisjoint(problem.weak_concepts):
+            words = f"{barrier.words}, but not for certain ({problem.display or 'by its code'})"
+            judgement.add("review", words, barrier.id, [_problem(problem)])
             return
 
 

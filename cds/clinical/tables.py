@@ -104,7 +104,8 @@ class Barrier:
 
     `concepts`: any of them present is enough. `history` counts resolved ones too. `within_days` looks back only so
     far; `older` is then the effect of an older one. `stops` says a running course must end for it as well. The effect
-    "missing" says that `words` name what must be known first.
+    "missing" says that `words` name what must be known first. With `hints` a problem that may be one of `concepts` asks
+    for a review.
     """
 
     id: str
@@ -121,6 +122,7 @@ class Barrier:
     older: Effect | None = None
     stops: bool = False
     refer: bool = False
+    hints: bool = False
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

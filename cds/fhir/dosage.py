@@ -235,9 +235,9 @@ def _with_text(
         if len(text.parts) != 1 or not text.parts[0].amounts:
             return (None, None, missing, None), times
         part = text.parts[0]
-        if part.rhythm is not None and part.rhythm.per_day is not None and rhythm.per_day is not None:
-            if not math.isclose(part.rhythm.per_day, rhythm.per_day, rel_tol=1e-3):
-                return (None, None, "the text and the timing disagree", None), times
+        often = part.rhythm.per_day if part.rhythm is not None else None
+        if often is not None and rhythm.per_day is not None and not math.isclose(often, rhythm.per_day, rel_tol=1e-3):
+            return (None, None, "the text and the timing disagree", None), times
         return _part(part, rhythm, component, components), times
     found = [_part(part, part.rhythm, component, components) for part in text.parts]
     times = tuple(time for part in text.parts if part.rhythm is not None for time in part.rhythm.times)
@@ -285,6 +285,9 @@ def _one_dose(amounts: tuple[Amount, ...], component: DrugComponent, components:
     strength = component.strength_mg
     if by_mass.low is None:
         return by_mass
+    if mass.unit == "total":
+        fits = by_pieces.low is None or math.isclose(by_pieces.low, by_mass.low)
+        return by_mass if fits else Mg(problem="the tablets and the mg do not fit")
     if pieces.low == 1 or (by_pieces.low is not None and math.isclose(by_pieces.low, by_mass.low)):
         agree = strength is None or by_pieces.low is None or math.isclose(by_pieces.low, by_mass.low)
         return by_mass if agree else Mg(problem="the tablets and the mg do not fit")
@@ -325,10 +328,16 @@ def _weigh(mg: Mg, rhythm: Rhythm, said: str) -> tuple[float | None, float | Non
     if mg.low != mg.high:
         return None, mg.high * rhythm.per_day, "the amount is given as a range", None
     daily = mg.low * rhythm.per_day
-    often = f"{plain_number(rhythm.per_day)} times a day" if rhythm.per_day >= 1 else "as an average of the days"
+    each = said if said.endswith(" mg") else f"{said} ({plain_number(mg.low)} mg)"
     if not math.isfinite(daily) or daily > _MOST_MG_A_DAY:
         return None, None, "more than anyone takes", None
-    return daily, None, f"{said}, {often}", None
+    return daily, None, f"{each}, {_often(rhythm.per_day)}", None
+
+
+def _often(per_day: float) -> str:
+    if per_day < 1:
+        return f"every {plain_number(1 / per_day)} days, as the average of a day"
+    return {1.0: "once a day", 2.0: "twice a day"}.get(round(per_day, 6), f"{plain_number(per_day)} times a day")
 
 
 def _pieces_a_day(read: _Read) -> float | None:

@@ -16,6 +16,7 @@ from cds.fhir.dosage_words import (
     COUNT_UNITS,
     DAYS,
     FILLERS,
+    FRACTIONS,
     HOURS,
     MG_PER_MASS_UNIT,
     NUMBER_WORDS,
@@ -24,6 +25,7 @@ from cds.fhir.dosage_words import (
     PER_DAY_SIGNS,
     RHYTHMS,
     VOLUME_UNITS,
+    VULGAR_SIGNS,
     Amount,
     Kind,
     Rhythm,
@@ -50,15 +52,9 @@ class TextDose:
 _LONGEST_TEXT = 300
 _MOST_TABLETS_IN_A_SCHEME = 10
 _LONGEST_PHRASE = 4
-_FRACTIONS = {(1, 2), (1, 3), (2, 3), (1, 4), (3, 4)}
-_VULGAR = {"½": " 1/2 ", "¼": " 1/4 ", "¾": " 3/4 ", "×": " x ", "–": "-", "−": "-", "µ": "u", "μ": "u"}
 _DOTTED = re.compile(r"\b([a-z])\.(?=[a-z]\b)")
 _TOKEN = re.compile(r"[0-9]+(?:[.,][0-9]+)?|[a-z]+|[^\s]")
 _NUMBER = re.compile(r"[0-9]{1,6}(?:\.[0-9]{1,4}|,[0-9]{1,2})?")
-_STRENGTH = re.compile(
-    r"(?<![0-9.,/])([0-9]{1,5}(?:[.,][0-9]{1,4})?)(?:\s?[/-]\s?([0-9]{1,5}(?:\.[0-9]{1,4})?))?"
-    r"\s?(mg|mcg|ug|g)\b(?:\s?/\s?([0-9]{0,4}(?:\.[0-9]{1,2})?)\s?(ml|h|hr|hour|24)\b)?"
-)
 
 
 def read_dosage_text(text: object, names: Iterable[str] = ()) -> TextDose | None:
@@ -82,25 +78,6 @@ def read_rhythm_text(text: object) -> Rhythm | None:
     return _together(reader.parts[0].rhythms)
 
 
-def strengths_in(text: str) -> tuple[tuple[float, bool], ...]:
-    """List the strengths a medicine's text gives, in mg, each with whether it is of one mL; () where one is unclear."""
-    found: list[tuple[float, bool]] = []
-    for match in _STRENGTH.finditer(text.lower()[:_LONGEST_TEXT]):
-        first, second, unit, volume, per = match.groups()
-        if per not in (None, "ml") or (first.find(",") >= 0 and len(first.partition(",")[2]) > 2):
-            return ()
-        try:
-            millilitres = float(volume) if volume else 1.0
-        except ValueError:
-            return ()
-        if millilitres <= 0:
-            return ()
-        for number in (first, second):
-            if number is not None:
-                found.append((float(number.replace(",", ".")) * MG_PER_MASS_UNIT[unit] / millilitres, per == "ml"))
-    return tuple(found)
-
-
 @dataclass(slots=True)
 class _Part:
     amounts: list[Amount]
@@ -118,10 +95,17 @@ class _Reader:
         self.place = 0
 
     def read(self) -> bool:
+        eaters = (
+            self._eat_as_needed,
+            self._eat_length,
+            self._eat_scheme,
+            self._eat_rhythm,
+            self._eat_amount,
+            self._eat_filler,
+        )
         while self.place < len(self.tokens):
-            if not (self._eat_as_needed() or self._eat_length() or self._eat_scheme() or self._eat_rhythm()):
-                if not (self._eat_amount() or self._eat_filler()):
-                    return False
+            if not any(eat() for eat in eaters):
+                return False
         return True
 
     def dose(self) -> TextDose | None:
@@ -248,8 +232,7 @@ class _Reader:
         return True
 
     def _eat_amount(self) -> bool:
-        start = self.place
-        amount = self._amount()
+        start, amount = self.place, self._amount()
         if amount is None:
             self.place = start
             return False
@@ -296,12 +279,13 @@ class _Reader:
             if self._peek() and self._peek()[0] in COUNT_UNITS:
                 self.place += 1
             return Amount(kind="mass", low=low * factor * times, high=low * factor * times, times=times)
-        if kind == "mass" and self._peek() == ("/",) and self._peek(1, 1) not in (("day",), ("d",)):
+        meaning, after = OTHER_UNITS.get(unit, ""), (*self._peek(), "")[0]
+        if kind == "mass" and after == "/" and self._peek(2) not in PER_DAY_SIGNS:
             return None
-        if kind == "mass" and self._peek() and self._peek()[0] in COUNT_UNITS:
-            self.place += 1  # "25 mg tablet": the strength of one, not yet how many
-            return Amount(kind="mass", low=low * factor, high=high * factor, unit="strength")
-        return Amount(kind=kind, low=low * factor, high=high * factor, unit=OTHER_UNITS.get(unit, ""))
+        if kind == "mass" and (after in COUNT_UNITS or after == "total"):
+            self.place += 1
+            meaning = "total" if after == "total" else "strength"  # "25 mg tablet": of one, not yet how many
+        return Amount(kind=kind, low=low * factor, high=high * factor, unit=meaning)
 
     def _each(self) -> float | None:
         """The mg of "25 mg tablet" standing here, after the number of them."""
@@ -321,7 +305,7 @@ class _Reader:
             first, second, used = _plain(here[0]), _plain(here[3]), 5
         else:
             return None
-        if not first or not second or (first, second) in _FRACTIONS:
+        if not first or not second or (first, second) in FRACTIONS:
             return None
         self.place += used
         if self._peek() and self._peek()[0] in COUNT_UNITS:
@@ -352,7 +336,7 @@ class _Reader:
         if len(here) < 3 or here[1] != "/":
             return None, 0
         above, below = _plain(here[0]), _plain(here[2])
-        if above is None or below is None or (above, below) not in _FRACTIONS:
+        if above is None or below is None or (above, below) not in FRACTIONS:
             return None, 0
         return above / below, 3
 
@@ -368,7 +352,7 @@ class _Reader:
 
 def _tokens(text: str) -> list[str]:
     plain = text.lower()
-    for sign, letters in _VULGAR.items():
+    for sign, letters in VULGAR_SIGNS.items():
         plain = plain.replace(sign, letters)
     plain = _DOTTED.sub(r"\1", plain)
     return _TOKEN.findall(plain)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 from dataclasses import dataclass
 from typing import Literal
 
@@ -13,7 +14,24 @@ MG_PER_MASS_UNIT = {
     **dict.fromkeys(("ug", "mcg", "microgram", "micrograms"), 0.001),
 }
 COUNT_UNITS = frozenset(
-    ["tab", "tabs", "tabl", "tbl", "tablet", "tablets", "cap", "caps", "capsule", "capsules", "caplet", "caplets", "pill", "pills", "softgel", "softgels"]
+    [
+        "tab",
+        "tabs",
+        "tabl",
+        "tbl",
+        "tablet",
+        "tablets",
+        "cap",
+        "caps",
+        "capsule",
+        "capsules",
+        "caplet",
+        "caplets",
+        "pill",
+        "pills",
+        "softgel",
+        "softgels",
+    ]
 )
 VOLUME_UNITS = frozenset({"ml", "mls", "milliliter", "milliliters", "millilitre", "millilitres"})
 OTHER_UNITS = {"meq": "meq", "meqs": "meq", "mmol": "mmol", "unit": "units", "units": "units", "iu": "units"}
@@ -25,6 +43,7 @@ class Amount:
 
     `low` and `high` differ for a range. `each_mg` is the strength the text itself gives one tablet. `parts` are the mg of
     a "pair" ("24/26 mg"). `times` is N of "N x 25 mg", already multiplied in: it may also say how often.
+    `unit` of a mass is "strength" for "25 mg tablet" and "total" for "(50 mg total)", both only in texts.
     """
 
     kind: Kind
@@ -37,7 +56,7 @@ class Amount:
 
     def __str__(self) -> str:
         number = f"{self.low:g}" if self.low == self.high else f"{self.low:g} to {self.high:g}"
-        unit = {"mass": " mg", "count": " unit(s) of the product", "volume": " mL", "bare": ""}.get(self.kind)
+        unit = {"mass": " mg", "count": " of the product", "volume": " mL", "bare": " of the product"}.get(self.kind)
         if self.kind == "pair":
             return f"{'/'.join(f'{part:g}' for part in self.parts)} mg"
         return number + (unit if unit is not None else f" {self.unit}")
@@ -127,7 +146,13 @@ PER_DAY_SIGNS = {("/", "day"): 1.0, ("/", "d"): 1.0}
 HOURS = frozenset({"h", "hr", "hrs", "hour", "hours"})
 DAYS = {"day": 1.0, "days": 1.0, "week": 7.0, "weeks": 7.0, "month": DAYS_PER_MONTH, "months": DAYS_PER_MONTH}
 NUMBER_WORDS = {
-    **dict(zip(["one", "two", "three", "four", "five", "six", "seven", "eight", "nine", "ten"], map(float, range(1, 11)), strict=True)),
+    **dict(
+        zip(
+            ["one", "two", "three", "four", "five", "six", "seven", "eight", "nine", "ten"],
+            map(float, range(1, 11)),
+            strict=True,
+        )
+    ),
     "half": 0.5,
     "quarter": 0.25,
 }
@@ -174,3 +199,28 @@ FILLERS = {
         "=",
     )
 }
+FRACTIONS = {(1, 2), (1, 3), (2, 3), (1, 4), (3, 4)}
+VULGAR_SIGNS = {"½": " 1/2 ", "¼": " 1/4 ", "¾": " 3/4 ", "×": " x ", "–": "-", "−": "-", "µ": "u", "μ": "u"}
+_LONGEST_TEXT = 500
+_STRENGTH = re.compile(
+    r"(?<![0-9.,/])([0-9]{1,5}(?:[.,][0-9]{1,4})?)(?:\s?[/-]\s?([0-9]{1,5}(?:\.[0-9]{1,4})?))?"
+    r"\s?(mg|mcg|ug|g)\b(?:\s?/\s?([0-9]{0,4}(?:\.[0-9]{1,2})?)\s?(ml|h|hr|hour|24)\b)?"
+)
+
+
+def strengths_in(text: str) -> tuple[tuple[float, bool], ...]:
+    """List the strengths a medicine's text gives, in mg, each with whether it is of one mL; () where one is unclear."""
+    found: list[tuple[float, bool]] = []
+    for match in _STRENGTH.finditer(text.lower()[:_LONGEST_TEXT]):
+        first, second, unit, volume, per = match.groups()
+        if per not in (None, "ml") or (first.find(",") >= 0 and len(first.partition(",")[2]) > 2):
+            return ()
+        try:
+            millilitres = float(volume) if volume else 1.0
+        except ValueError:
+            return ()
+        if millilitres <= 0:
+            return ()
+        numbers = [float(number.replace(",", ".")) for number in (first, second) if number is not None]
+        found += [(number * MG_PER_MASS_UNIT[unit] / millilitres, per == "ml") for number in numbers]
+    return tuple(found)

@@ -110,6 +110,7 @@ def _unit(text: object) -> _Unit | None:
 
 
 def read_range(value: object, place: Place) -> Amount | None:
+    """Read a Range of amounts; without a lower end any less is meant too. None, with an issue, where it is none."""
     if not isinstance(value, Mapping):
         place.refuse("is not a Range", "Send low and high")
         return None
@@ -120,7 +121,6 @@ def read_range(value: object, place: Place) -> Amount | None:
     if low.kind != high.kind or low.unit != high.unit or low.low > high.high:
         place.refuse("has ends that do not fit together", "Send low and high in one unit, low first")
         return None
-    # "up to 2 tablets" has no lower end: any less is meant too
     return Amount(kind=high.kind, low=0.0 if value.get("low") is None else low.low, high=high.high, unit=high.unit)
 
 
@@ -211,6 +211,7 @@ def _is_whole(number: float) -> bool:
 
 
 def plain_number(number: float) -> str:
+    """Write a number as notes show it, at the precision of doses (ruling 36)."""
     return f"{round(number, _DIGITS):g}"
 
 

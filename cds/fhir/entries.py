@@ -108,7 +108,9 @@ def newest_of_each(opened: Opened) -> tuple[list[Entry], dict[str, Issue]]:
 
 def _newest(group: list[Entry]) -> tuple[Entry | None, Issue | None]:
     # Where the versions tie, `meta` decides, so that the order of the entries never does.
-    ordered = sorted(group, key=lambda entry: (_version(entry.resource), repr(entry.resource.get("meta"))), reverse=True)
+    ordered = sorted(
+        group, key=lambda entry: (_version(entry.resource), repr(entry.resource.get("meta"))), reverse=True
+    )
     first = ordered[0]
     others = [entry for entry in ordered[1:] if not _same_content(first.resource, entry.resource)]
     first = replace(

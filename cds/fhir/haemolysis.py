@@ -9,8 +9,17 @@ from typing import Any
 # HL7 table 0493 (specimen condition) HEM; the word itself in local code systems.
 _CODES = frozenset({"HEM", "HEMOLYZED", "HAEMOLYSED", "HEMOLYSED"})
 _WORD = re.compile(r"ha?emoly[sz]", re.IGNORECASE)
+# What stands before the word ("not visibly haemolysed", "no icterus, lipaemia or haemolysis"), or after it ("haemolysis:
+# none", "haemolysis index 0"). A comma alone ends a denial: "no clots, haemolysed" is haemolysed.
 _NEGATED = re.compile(
-    r"\b(?:no|not|non|without|nil|negative for|absence of|free of)\b[\s-]*(?:\w+\s+){0,3}$", re.IGNORECASE
+    r"\b(?:no|not|non|without|nil|negative for|absence of|free of|free from)\b[\s-]*"
+    r"(?:(?:\w+\s+){0,3}|(?:\w+,?\s+){0,5}n?or\s+)$|\bun-?$",
+    re.IGNORECASE,
+)
+_DENIED_AFTER = re.compile(
+    r"is\b(?:\s+(?:index|score|grade))?\s*[:=(-]*\s*(?:is\s+|was\s+)?"
+    r"(?:none|nil|absent|negative|not\s+(?:seen|detected|present|observed|visible)|0(?![.,]?\d)|no\s*(?:$|[.;,)]))",
+    re.IGNORECASE,
 )
 _LONGEST_TEXT = 10_000
 
@@ -22,7 +31,11 @@ def is_haemolysed(resource: Mapping[str, Any]) -> bool:
 
 def _says_so(text: str) -> bool:
     text = text[:_LONGEST_TEXT]
-    return any(not _NEGATED.search(text[max(0, word.start() - 60) : word.start()]) for word in _WORD.finditer(text))
+    return any(
+        not _NEGATED.search(text[max(0, word.start() - 60) : word.start()])
+        and not _DENIED_AFTER.match(text, word.end())
+        for word in _WORD.finditer(text)
+    )
 
 
 def _codes(resource: Mapping[str, Any]) -> Iterator[str]:

@@ -9,7 +9,7 @@ from typing import Any
 from cds.clinical.record import MatchedBy, Route
 from cds.fhir.code_matches import DrugComponent, DrugMatch
 from cds.fhir.codings import codings_of, shown_text, texts_of, without_brackets, words_of
-from cds.fhir.dosage_text import strengths_in
+from cds.fhir.dosage_words import strengths_in
 from cds.fhir.dose_amounts import ARNI, read_quantity
 from cds.fhir.intake import NotRecognised
 from cds.fhir.timing import Place

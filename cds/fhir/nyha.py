@@ -10,14 +10,13 @@ from typing import Any
 _LOINC = ("http://loinc.org", "urn:oid:2.16.840.1.113883.6.1")
 _SNOMED = ("http://snomed.info/sct", "urn:oid:2.16.840.1.113883.6.96")
 
-# LOINC answer list of 88020-3 (from memory, marked so in our code table); SNOMED CT findings of NYHA class.
+# LOINC answer list of 88020-3 (from memory, marked so in our code table; the last digit is a check digit, modulus 10, and
+# does not count up); SNOMED CT findings of NYHA class. Each from class I to IV.
+_LOINC_ANSWERS = ("LA28404-4", "LA28405-1", "LA28406-9", "LA28407-7")
+_SNOMED_FINDINGS = ("420300004", "421704003", "420913000", "422293003")
 _ANSWERS: Mapping[tuple[str, str], int] = MappingProxyType(
-    {(system, f"LA{28404 + step}-{4 + step}"): step + 1 for system in _LOINC for step in range(4)}
-    | {
-        (system, code): grade
-        for system in _SNOMED
-        for code, grade in (("420300004", 1), ("421704003", 2), ("420913000", 3), ("422293003", 4))
-    }
+    {(system, code): grade for system in _LOINC for grade, code in enumerate(_LOINC_ANSWERS, start=1)}
+    | {(system, code): grade for system in _SNOMED for grade, code in enumerate(_SNOMED_FINDINGS, start=1)}
 )
 _ROMAN = MappingProxyType({"i": 1, "ii": 2, "iii": 3, "iv": 4})
 _WORDS = re.compile(

@@ -35,8 +35,8 @@ _TIME_WORDS = {
 _DAYS_OF_WEEK = frozenset({"mon", "tue", "wed", "thu", "fri", "sat", "sun"})
 # FHIR R4, value set event-timing. Those left out ("AC", "C", "PC") mean every meal, and nobody says how many meals.
 _EVENTS = frozenset(
-    ("MORN", "MORN.early", "MORN.late", "NOON", "AFT", "AFT.early", "AFT.late", "EVE", "EVE.early", "EVE.late")
-    + ("NIGHT", "PHS", "HS", "WAKE", "CM", "CD", "CV", "ACM", "ACD", "ACV", "PCM", "PCD", "PCV")
+    {"WAKE", "PHS", "HS", "NIGHT", "NOON", "CM", "CD", "CV", "ACM", "ACD", "ACV", "PCM", "PCD", "PCV"}
+    | {f"{part}{side}" for part in ("MORN", "AFT", "EVE") for side in ("", ".early", ".late")}
 )
 _MEALS = frozenset({"C", "AC", "PC"})
 _GTS = frozenset(

@@ -24,6 +24,7 @@ _RULES: Mapping[str, tuple[str, str]] = {
     "value_error": ("does not keep a rule of R4", "Write the element as the R4 data type says"),
     "wrong-resource-type": ("is not the resource expected here", "Send the resource in the element meant for it"),
 }
+_ABSTRACT = ("Resource", "DomainResource")
 _OTHER_RULE = ("is not of the type R4 asks for", "Write the element as the R4 data type says")
 _WHOLE = "the resource"
 _DATED = re.compile(r"(?:[dD]ate|[tT]ime|[iI]nstant|start|end|issued|authoredOn|recorded|lastUpdated)(?:\[\d+\])?$")
@@ -35,7 +36,8 @@ _R5_MEDICATION = "is the R5 form of the medicine; this service reads R4"
 
 
 class _Model(Protocol):
-    def model_validate(self, obj: object) -> object: ...
+    @classmethod
+    def model_validate(cls, obj: object) -> object: ...
 
 
 def refusal(resource: Mapping[str, Any]) -> Issue | None:
@@ -43,8 +45,8 @@ def refusal(resource: Mapping[str, Any]) -> Issue | None:
 
     Names the first place and rule that fails and never repeats what stands there. Raises nothing.
     """
-    kind, identity = resource.get("resourceType"), resource.get("id")
-    kind = kind if isinstance(kind, str) and _NAME.fullmatch(kind) else "Resource"
+    sent, identity = resource.get("resourceType"), resource.get("id")
+    kind = sent if isinstance(sent, str) and _NAME.fullmatch(sent) else "Resource"
     name = f"{kind}/{identity if isinstance(identity, str) and FHIR_ID.fullmatch(identity) else '?'}"
     model = _model(kind)
     if model is None:
@@ -64,7 +66,7 @@ def refusal(resource: Mapping[str, Any]) -> Issue | None:
     return _failure(model, resource, name)
 
 
-def _failure(model: _Model, resource: Mapping[str, Any], name: str) -> Issue | None:
+def _failure(model: type[_Model], resource: Mapping[str, Any], name: str) -> Issue | None:
     from pydantic import ValidationError
 
     try:
@@ -92,14 +94,15 @@ def _failure(model: _Model, resource: Mapping[str, Any], name: str) -> Issue | N
 
 
 @cache
-def _model(kind: str) -> _Model | None:
+def _model(kind: str) -> type[_Model] | None:
     from fhir.resources.R4B import get_fhir_model_class
 
     try:
-        model: _Model = get_fhir_model_class(kind)
+        model: type[_Model] = get_fhir_model_class(kind)
     except (KeyError, LookupError, ValueError):
         return None
-    return model
+    is_resource = issubclass(model, get_fhir_model_class("Resource")) and kind not in _ABSTRACT
+    return model if is_resource else None  # the library knows data types and backbone elements by name too
 
 
 def _rule(name: str, path: str) -> tuple[str, str]:

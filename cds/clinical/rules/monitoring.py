@@ -219,7 +219,7 @@ def already_ordered(situation: Situation, tests: tuple[str, ...]) -> str | None:
     """The active order that covers all of `tests` (eGFR covers creatinine) and is newer than their last result."""
     for order in situation.record.tests_ordered:
         asked = set(order.analytes)
-        if not all(asked & set(_ANY_OF.get(test, (test,))) for test in tests):
+        if order.is_draft or not all(asked & set(_ANY_OF.get(test, (test,))) for test in tests):
             continue
         last = max((r.taken.latest for test in tests for r in _results(situation, test)), default=date.min)
         if order.ordered is None or order.ordered.latest >= last:

@@ -11,7 +11,7 @@ from datetime import date, timedelta
 from typing import Literal
 
 from cds.clinical.findings import Evidence
-from cds.clinical.readings import Reading, days_old, say_value, show
+from cds.clinical.readings import Reading, days_old, say_value, show_limit, value_in_words
 from cds.clinical.record import DrugCourse, Intolerance, Problem
 from cds.clinical.situation import Situation, concepts_present
 from cds.clinical.tables import Barrier, DrugBarrier, Effect, Limit, Needed
@@ -31,6 +31,7 @@ class Judgement:
     missing: list[str] = field(default_factory=list)
     evidence: list[Evidence] = field(default_factory=list)
     limits: list[str] = field(default_factory=list)
+    fresh: list[str] = field(default_factory=list)  # values that are fresh enough, in words
     wanted_tests: list[str] = field(default_factory=list)
     needs_referral: bool = False
     look_again: list[date] = field(default_factory=list)  # when a time-bound block is over
@@ -275,6 +276,7 @@ def _need_fresh(situation: Situation, need: Needed, judgement: Judgement, stale:
         within = need.unstable_within_days
     if days_old(newest.taken, situation.today) <= within:
         judgement.evidence.append(newest.evidence("supports"))
+        judgement.fresh.append(value_in_words(newest, situation.tables))
         return
     why = f" ({_unstable_because(situation)})" if within != need.within_days else ""
     judgement.missing.append(f"{name}: last on {newest.taken}, wanted within {within} days{why}")
@@ -317,7 +319,7 @@ def _hold_limit(situation: Situation, limit: Limit, readings: tuple[Reading, ...
             continue
         holds = reading.holds(limit.sign, value, unit)
         name = situation.tables.unit_names.get(unit, unit)
-        said = f"{say_value(reading, situation.tables)} is {_SIGN_WORDS[limit.sign]} {show(value)} {name}"
+        said = f"{say_value(reading, situation.tables)} is {_SIGN_WORDS[limit.sign]} {show_limit(limit.analyte, value, unit)} {name}"
         if holds and limit.sex is not None and sex not in ("male", "female"):
             holds = None
         if holds:
@@ -328,7 +330,7 @@ def _hold_limit(situation: Situation, limit: Limit, readings: tuple[Reading, ...
         if holds is None:
             name = situation.tables.analyte_names.get(limit.analyte, limit.analyte)
             judgement.missing.append(
-                f"{name}: {say_value(reading, situation.tables)} leaves open whether it is {_SIGN_WORDS[limit.sign]} {show(value)}"
+                f"{name}: {say_value(reading, situation.tables)} leaves open whether it is {_SIGN_WORDS[limit.sign]} {show_limit(limit.analyte, value, unit)}"
             )
             judgement.wanted_tests.append(limit.analyte)
             judgement.evidence.append(reading.evidence("limits"))

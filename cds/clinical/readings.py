@@ -63,6 +63,7 @@ class Reading:
     source: str
     note: str | None = None
     is_computed: bool = False
+    is_plain: bool = True  # one number, without comparator or range
 
     def holds(self, sign: Sign, value: float, unit: str) -> bool | None:
         """Compare in `unit`, which must be one the analyte is known in."""
@@ -73,7 +74,7 @@ class Reading:
             what=name or (f"{self.analyte} (computed)" if self.is_computed else self.analyte),
             role=role,
             resource=self.source,
-            value=self.shown if self.shown != show(self.shown_value) else self.shown_value,
+            value=self.shown_value if self.is_plain else self.shown,
             unit=self.unit,
             date=str(self.taken),
         )
@@ -101,7 +102,7 @@ def reading_of(measurement: Measurement) -> Reading:
         )
     sent = measurement.reported_value if reported == measurement.reported_unit else measurement.value
     shown_value = units.as_reported(measurement.analyte, sent, reported)
-    shown = show(shown_value)
+    shown = units.shown(measurement.analyte, measurement.reported_value, reported)
     if measurement.low is not None and measurement.high is not None:
         shown = f"{show(measurement.low)}-{show(measurement.high)}"
     return Reading(
@@ -113,6 +114,7 @@ def reading_of(measurement: Measurement) -> Reading:
         unit=reported,
         source=measurement.source,
         note=measurement.note,
+        is_plain=measurement.comparator is None and measurement.low is None,
     )
 
 
@@ -153,11 +155,19 @@ def days_old(taken: PartialDate, today: date) -> int:
     return (today - taken.earliest).days
 
 
-def say_value(reading: Reading, tables: ClinicalTables) -> str:
-    """The reading in words: "potassium 5.1 mmol/L on 2025-09-12"."""
+def show_limit(analyte: str, value: float, unit: str) -> str:
+    """A limit as its analyte is shown: "5.0" for a potassium of 5."""
+    return units.shown(analyte, value, unit)
+
+
+def value_in_words(reading: Reading, tables: ClinicalTables) -> str:
+    """The reading without its date: "potassium 5.1 mmol/L"."""
     name = tables.analyte_names.get(reading.analyte, reading.analyte)
     unit = tables.unit_names.get(reading.unit, reading.unit)
-    unit = "%" if unit == "%" else unit
     computed = " (computed)" if reading.is_computed else ""
-    spaced = f"{reading.shown} {unit}".rstrip()
-    return f"{name} {spaced}{computed} on {reading.taken}"
+    return f"{name} {f'{reading.shown} {unit}'.rstrip()}{computed}"
+
+
+def say_value(reading: Reading, tables: ClinicalTables) -> str:
+    """The reading in words: "potassium 5.1 mmol/L on 2025-09-12"."""
+    return f"{value_in_words(reading, tables)} on {reading.taken}"

@@ -60,6 +60,7 @@ def computed_egfr(record: PatientRecord, creatinine: Measurement) -> Reading | N
         source=creatinine.source,
         note="computed by CKD-EPI 2021 from creatinine",
         is_computed=True,
+        is_plain=low == high,
     )
 
 

@@ -173,6 +173,18 @@ PRECISION: Mapping[str, int] = MappingProxyType(
 _OTHER_PRECISION: Mapping[tuple[str, str], int] = MappingProxyType({("creatinine", "mg/dL"): 2})
 _OTHER_REPORTED_DECIMALS: Mapping[tuple[str, str], int] = MappingProxyType({("creatinine", "mg/dL"): 3})
 
+# Decimals a reader expects even where they are zero (common practice).
+_LEAST_DECIMALS: Mapping[tuple[str, str], int] = MappingProxyType(
+    {
+        ("potassium", "mmol/L"): 1,
+        ("potassium", "meq/L"): 1,
+        ("creatinine", "mg/dL"): 1,
+        ("magnesium", "mmol/L"): 1,
+        ("haemoglobin", "g/dL"): 1,
+        ("digoxin", "ng/mL"): 1,
+    }
+)
+
 # Lowest and highest believable value in the canonical unit; outside is an error of unit, sample or typing, never a fact.
 # Source: our table of LOINC codes, column plausible_range (survivable extremes and measuring ranges), checked "read" there.
 PLAUSIBLE: Mapping[str, tuple[float, float]] = MappingProxyType(
@@ -267,6 +279,14 @@ def as_reported(analyte: str, value: float, unit: str) -> float:
         coarser = 0 if conversion is None else max(0, conversion.factor.adjusted())
         digits = REPORTED_DECIMALS + coarser
     return round_half_up(value, digits)
+
+
+def shown(analyte: str, value: float, unit: str) -> str:
+    """The value as people write it: as reported, potassium and the like with at least their usual decimals."""
+    text = format(Decimal(repr(as_reported(analyte, value, unit))), "f")
+    whole, _, decimals = text.partition(".")
+    decimals = decimals.rstrip("0").ljust(_LEAST_DECIMALS.get((analyte, unit), 0), "0")
+    return f"{whole}.{decimals}" if decimals else whole
 
 
 def convert(analyte: str, value: float, from_unit: str, to_unit: str) -> float:

@@ -110,7 +110,7 @@ def test_creatinine_is_held_against_the_limit_printed_in_the_unit_of_the_report(
     reading = reading_of(measured("creatinine", 3.0, "mg/dL"))
     assert reading.holds(">", 3.0, "mg/dL") is False
     assert reading.holds(">", 264, "umol/L") is True
-    assert reading.shown == "3"
+    assert float(reading.shown) == 3
     assert reading.unit == "mg/dL"
 
 

@@ -94,8 +94,8 @@ def test_a_supply_for_thousands_of_years_ends_at_the_end_of_the_calendar(days):
 def test_of_one_day_the_later_hour_is_newer_and_a_date_without_hour_the_oldest():
     morning, evening = at("2025-03-04T08:00:00+00:00"), at("2025-03-04T20:00:00+00:00")
     whole_month = PartialDate.of_month(2025, 2)
-    ordered = [whole_month, day("2025-03-04"), morning, evening, day("2025-03-05")]
-    assert sorted(ordered[::-1], key=recency) == ordered
+    mixed = [evening, day("2025-03-05"), day("2025-03-04"), whole_month, morning]
+    assert sorted(mixed, key=recency) == [whole_month, day("2025-03-04"), morning, evening, day("2025-03-05")]
 
 
 @given(day=DAYS)

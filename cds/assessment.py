@@ -14,7 +14,7 @@ from cds.content.load import Content
 from cds.errors import Issue
 from cds.fhir.build_record import BuiltRecord, build_record
 from cds.fhir.bundle import PatientResources, SplitInput, split_by_patient
-from cds.fhir.drafts import drug_draft, test_draft
+from cds.fhir.drafts import draft_drug_order, draft_test_order
 from cds.fhir.reading import COMMAND_LINE_LIMITS, Limits, read_json
 from cds.fhir.record_shape import course_issues, issue_shape, record_shape
 
@@ -120,11 +120,11 @@ def _drafts(card: Card, situation: Situation, content: Content) -> list[dict[str
     patient, today = situation.record.patient, situation.today
     reasons = [fact.resource for fact in card.evidence if fact.resource is not None]
     drugs = [
-        drug_draft(proposal, content.order_codes, patient=patient, authored_on=today, reasons=reasons)
+        draft_drug_order(proposal, content.order_codes, patient=patient, authored_on=today, reasons=reasons)
         for proposal in card.drug_proposals
     ]
     tests = [
-        test_draft(
+        draft_test_order(
             proposal,
             test,
             content.wording.name(test),

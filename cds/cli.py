@@ -101,13 +101,19 @@ def _run(
         _stop(str(error), error.exit_code)
     except Exception as error:  # noqa: BLE001 - the last resort: a traceback could show a patient's values
         where = _place_of(error)
-        _stop(f"an error of the program itself ({type(error).__name__} at {where}).\nPlease report it with this line.", _OWN_ERROR)
+        _stop(
+            f"an error of the program itself ({type(error).__name__} at {where}).\nPlease report it with this line.",
+            _OWN_ERROR,
+        )
     _print(answer)
     refused = _refused(answer)
     if not answer.get("assessments", answer.get("records")):
-        _stop("the input holds no patient that can be assessed.\nSend each Patient in the same Bundle; see the issues.", _NO_PATIENT)
+        _stop(
+            "the input holds no patient that can be assessed.\nSend each Patient in the same Bundle; see the issues.",
+            _NO_PATIENT,
+        )
     if strict and refused:
-        _stop(f"{refused} resources or values were refused.\nSee the issues with severity \"refused\".", _STRICT)
+        _stop(f'{refused} resources or values were refused.\nSee the issues with severity "refused".', _STRICT)
 
 
 def _moment(as_of: str | None, zone: str) -> datetime:

@@ -54,7 +54,7 @@ PROBLEMS = {
     "senile cardiac amyloidosis": "16573007",
 }
 REACTIONS = {"angioedema": "41291007", "cough": "49727002"}
-NYHA = {1: "LA28404-4", 2: "LA28405-5", 3: "LA28406-6", 4: "LA28407-7"}
+NYHA = {1: "LA28404-4", 2: "LA28405-1", 3: "LA28406-9", 4: "LA28407-7"}
 
 
 def bundle(*resources: Resource, kind: str = "collection") -> bytes:

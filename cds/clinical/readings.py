@@ -102,7 +102,7 @@ def reading_of(measurement: Measurement) -> Reading:
         )
     sent = measurement.reported_value if reported == measurement.reported_unit else measurement.value
     shown_value = units.as_reported(measurement.analyte, sent, reported)
-    shown = units.shown(measurement.analyte, measurement.reported_value, reported)
+    shown = units.shown(measurement.analyte, sent, reported)
     if measurement.low is not None and measurement.high is not None:
         shown = f"{show(measurement.low)}-{show(measurement.high)}"
     return Reading(

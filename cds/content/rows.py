@@ -54,7 +54,7 @@ def _basis(left: dict[str, Any], *, table: str, name: str, sources: frozenset[st
     if raw["source"] not in sources:
         raise ContentError(table, name, "its source is not in sources.toml", "Name a source listed there.")
     if raw["checked"] not in ("read", "memory"):
-        raise ContentError(table, name, "'checked' must be \"read\" or \"memory\"", "Say whether the source was read.")
+        raise ContentError(table, name, '\'checked\' must be "read" or "memory"', "Say whether the source was read.")
     if not isinstance(raw["locator"], str) or not raw["locator"]:
         raise ContentError(table, name, "'locator' is missing", "Say where in the source the figure stands.")
     kind = raw["basis"] or "source"

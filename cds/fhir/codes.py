@@ -60,7 +60,8 @@ class CodeBook:
             for key, components in (drugs or {}).items()
         }
         measured = {
-            key: AnalyteMatch(analyte=analyte, use="accept", matched_by="site") for key, analyte in (analytes or {}).items()
+            key: AnalyteMatch(analyte=analyte, use="accept", matched_by="site")
+            for key, analyte in (analytes or {}).items()
         }
         return CodeBook(
             replace(

@@ -40,7 +40,7 @@ class OrderCodes:
     drugs: Mapping[str, OrderCode]
 
 
-def drug_draft(
+def draft_drug_order(
     proposal: DrugProposal, codes: OrderCodes, *, patient: str, authored_on: date, reasons: Iterable[str] = ()
 ) -> dict[str, Any]:
     """Build a MedicationRequest, status draft, intent proposal. Without a dose the prescriber must choose it.
@@ -61,7 +61,7 @@ def drug_draft(
     return _checked(draft)
 
 
-def test_draft(
+def draft_test_order(
     proposal: TestProposal,
     test: str,
     name: str,

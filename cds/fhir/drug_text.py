@@ -122,7 +122,11 @@ def form_in(words: Sequence[str], classes: Iterable[str | None]) -> tuple[bool |
     if present & _LOCAL:
         return False, "other"
     if present & _THROUGH_SKIN:
-        return (True, "transdermal") if _SYSTEMIC_PATCHES.issuperset(name for name in classes if name) else (False, "other")
+        return (
+            (True, "transdermal")
+            if _SYSTEMIC_PATCHES.issuperset(name for name in classes if name)
+            else (False, "other")
+        )
     if present & _PARENTERAL:
         return True, "parenteral"
     if present & _ORAL:

@@ -17,7 +17,8 @@ from cds.clinical import units
 from cds.clinical.record import Comparator
 from cds.errors import ResourceError
 from cds.fhir.nyha import class_of_concept, class_of_text
-from cds.fhir.units import understand_text, understand_unit
+from cds.fhir.ucum import scale_to_known
+from cds.fhir.units import UCUM_SYSTEMS, understand_text, understand_unit
 
 # Ruling 5: the only analytes whose unit may be missing, and the unit it then is. LVEF up to 1.0 is a fraction.
 UNIT_IF_NONE: Mapping[str, str] = MappingProxyType(
@@ -101,8 +102,8 @@ def _quantity(quantity: object, place: _Place) -> Amount:
     if comparator is not None and (not isinstance(comparator, str) or comparator not in get_args(Comparator)):
         place.refuse(".comparator", "is no comparator of FHIR R4", "Use <, <=, >= or >")
     number = _number(quantity.get("value"), place, ".value")
-    unit, notes = _unit_of(quantity, place)
-    return _with_unit(number, unit, place, _COMPARATORS.get(comparator or ""), notes)
+    unit, factor, notes = _unit_of(quantity, place)
+    return _with_unit(number * factor, unit, place, _COMPARATORS.get(comparator or ""), notes)
 
 
 def _number(value: object, place: _Place, below: str) -> float:
@@ -121,16 +122,22 @@ def _number(value: object, place: _Place, below: str) -> float:
     return number
 
 
-def _unit_of(quantity: Mapping[str, Any], place: _Place) -> tuple[str | None, tuple[str, ...]]:
-    """The unit as a UCUM code the analyte is known in (None: no unit at all), with notes."""
+def _unit_of(quantity: Mapping[str, Any], place: _Place) -> tuple[str | None, float, tuple[str, ...]]:
+    """The unit as a UCUM code the analyte is known in (None: no unit at all), the factor to it, and notes."""
     reading = understand_unit(quantity)
+    code = quantity.get("code")
+    is_known = reading.code is not None and units.is_known(place.analyte, reading.code)
+    if not is_known and isinstance(code, str) and quantity.get("system") in UCUM_SYSTEMS:
+        scale = scale_to_known(code.strip(), place.analyte)
+        if scale is not None:
+            return *scale, (f"sent in {code.strip()}, converted to {scale[0]}",)
     if reading.problem is not None:
         place.refuse(f".{reading.path}", reading.problem, _fix(place.analyte))
     if reading.code is None:
-        return None, ()
+        return None, 1.0, ()
     if reading.by_text is not None and not units.is_same_scale(place.analyte, reading.code, reading.by_text):
         place.refuse(".unit", "is a different unit from code", "Send unit and code that mean the same")
-    return _known(reading.code, f".{reading.path}", place), ()
+    return _known(reading.code, f".{reading.path}", place), 1.0, ()
 
 
 def _known(unit: str, below: str, place: _Place) -> str:

@@ -1,7 +1,8 @@
 """How senders write units -> UCUM codes. What a unit means for an analyte belongs to `cds.clinical.units`.
 
 Understood are the UCUM codes of the analytes we use, in either spelling of the litre and with any annotation, and the
-usual misspellings of ruling 42 in upper or lower case. Nothing else: a unit that must be guessed is an issue.
+usual misspellings of ruling 42 in upper or lower case. Other UCUM codes go through `ucum`; a unit that must be guessed is
+an issue.
 """
 
 from __future__ import annotations

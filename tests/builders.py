@@ -17,7 +17,10 @@ UCUM = "http://unitsofmeasure.org"
 
 # RxNorm ingredient (or salt) codes.
 INGREDIENTS = {
+    "amlodipine": "17767",
+    "atenolol": "1202",
     "bisoprolol": "19484",
+    "bumetanide": "1808",
     "captopril": "1998",
     "candesartan": "214354",
     "carvedilol": "20352",
@@ -26,6 +29,7 @@ INGREDIENTS = {
     "empagliflozin": "1545653",
     "enalapril": "3827",
     "eplerenone": "298869",
+    "finerenone": "2562811",
     "furosemide": "4603",
     "ibuprofen": "5640",
     "lisinopril": "29046",
@@ -34,10 +38,15 @@ INGREDIENTS = {
     "metoprolol": "6918",
     "metoprolol succinate": "221124",
     "metoprolol tartrate": "203191",
+    "nebivolol": "31555",
     "potassium chloride": "8591",
+    "propranolol": "8787",
     "ramipril": "35296",
     "sacubitril/valsartan": "1656339",
     "spironolactone": "9997",
+    "tadalafil": "358263",
+    "telmisartan": "73494",
+    "torasemide": "38413",
     "valsartan": "69749",
     "verapamil": "11170",
 }
@@ -52,6 +61,8 @@ PROBLEMS = {
     "hyperkalaemia": "14140009",
     "obstructive cardiomyopathy": "45227007",
     "senile cardiac amyloidosis": "16573007",
+    "dependence on dialysis": "105502003",
+    "hospice care": "305336008",
 }
 REACTIONS = {"angioedema": "41291007", "cough": "49727002"}
 NYHA = {1: "LA28404-4", 2: "LA28405-1", 3: "LA28406-9", 4: "LA28407-7"}
@@ -112,6 +123,10 @@ def heart_rate(value: float, when: str, **more: Any) -> Resource:
     return observation("heart-rate", "8867-4", value, "/min", when, **more)
 
 
+def pr_interval(value: float, when: str, **more: Any) -> Resource:
+    return observation("pr", "8625-6", value, "ms", when, **more)
+
+
 def weight(value: float, when: str, unit: str = "kg", **more: Any) -> Resource:
     return observation("weight", "29463-7", value, unit, when, **more)
 
@@ -134,8 +149,28 @@ def pressure(systolic: float, diastolic: float, when: str, **more: Any) -> Resou
 
 def nyha(grade: int, when: str, **more: Any) -> Resource:
     """NYHA class 1 to 4 as a coded answer."""
-    answer = {"coding": [{"system": LOINC, "code": NYHA[grade], "display": f"Class {'I' * grade if grade < 4 else 'IV'}"}]}
+    answer = {
+        "coding": [{"system": LOINC, "code": NYHA[grade], "display": f"Class {'I' * grade if grade < 4 else 'IV'}"}]
+    }
     return observation("nyha", "88020-3", None, "", when, valueCodeableConcept=answer, **more)
+
+
+def visit(
+    day: str,
+    *,
+    bp: tuple[int, int],
+    pulse: int,
+    k: float | None = None,
+    crea: float | None = None,
+    nyha_class: int | None = None,
+    kg: float | None = None,
+) -> list[Resource]:
+    """Vital signs of a day, with potassium (mmol/L), creatinine (mg/dL), NYHA class and weight where given."""
+    found = [pressure(*bp, day), heart_rate(pulse, day)]
+    found += [potassium(k, day)] if k is not None else []
+    found += [creatinine(crea, day)] if crea is not None else []
+    found += [nyha(nyha_class, day)] if nyha_class is not None else []
+    return found + ([weight(kg, day)] if kg is not None else [])
 
 
 def dosage(dose_mg: float, times_per_day: float) -> Resource:
@@ -172,13 +207,67 @@ def order(
     return {**resource, **more}
 
 
-def problem(name: str, since: str | None = None, *, status: str = "active", code: Resource | None = None, **more: Any) -> Resource:
+def until(medication: Resource, end: str, status: str = "stopped", **more: Any) -> Resource:
+    """The same order, which ended on a day or at an instant."""
+    line = medication["dosageInstruction"][0]
+    repeat = {**line["timing"]["repeat"], "boundsPeriod": {"end": end}}
+    ended = {**line, "timing": {"repeat": repeat}}
+    return {**medication, "status": status, "dosageInstruction": [ended], **more}
+
+
+def statement(drug: str, dose_mg: float, times_per_day: float = 1, *, since: str, **more: Any) -> Resource:
+    """A MedicationStatement: what is taken, since when."""
+    return {
+        "resourceType": "MedicationStatement",
+        "id": f"statement-{drug.replace('/', '-').replace(' ', '-')}-{since}",
+        "status": "active",
+        "medicationCodeableConcept": {"coding": [{"system": RXNORM, "code": INGREDIENTS[drug], "display": drug}]},
+        "subject": subject(),
+        "effectivePeriod": {"start": since},
+        "dosage": [dosage(dose_mg, times_per_day)],
+        **more,
+    }
+
+
+def dispense(drug: str, when: str, *, days: int = 30, **more: Any) -> Resource:
+    """A MedicationDispense handed over on a day."""
+    return {
+        "resourceType": "MedicationDispense",
+        "id": f"dispense-{drug.replace('/', '-').replace(' ', '-')}-{when}",
+        "status": "completed",
+        "medicationCodeableConcept": {"coding": [{"system": RXNORM, "code": INGREDIENTS[drug], "display": drug}]},
+        "subject": subject(),
+        "whenHandedOver": when,
+        "daysSupply": {"value": days, "unit": "d", "system": UCUM, "code": "d"},
+        **more,
+    }
+
+
+def administration(drug: str, when: str, dose_mg: float = 25, **more: Any) -> Resource:
+    """A MedicationAdministration: one dose given at a moment."""
+    return {
+        "resourceType": "MedicationAdministration",
+        "id": f"given-{drug.replace('/', '-').replace(' ', '-')}-{when}".replace(":", "").replace("+", "p"),
+        "status": "completed",
+        "medicationCodeableConcept": {"coding": [{"system": RXNORM, "code": INGREDIENTS[drug], "display": drug}]},
+        "subject": subject(),
+        "effectiveDateTime": when,
+        "dosage": {"dose": {"value": dose_mg, "unit": "mg", "system": UCUM, "code": "mg"}},
+        **more,
+    }
+
+
+def problem(
+    name: str, since: str | None = None, *, status: str = "active", code: Resource | None = None, **more: Any
+) -> Resource:
     """A Condition by SNOMED CT, unless `code` says otherwise."""
     coded = code or {"coding": [{"system": SNOMED, "code": PROBLEMS[name], "display": name}]}
     resource: Resource = {
         "resourceType": "Condition",
         "id": name.replace(" ", "-"),
-        "clinicalStatus": {"coding": [{"system": "http://terminology.hl7.org/CodeSystem/condition-clinical", "code": status}]},
+        "clinicalStatus": {
+            "coding": [{"system": "http://terminology.hl7.org/CodeSystem/condition-clinical", "code": status}]
+        },
         "verificationStatus": {
             "coding": [{"system": "http://terminology.hl7.org/CodeSystem/condition-ver-status", "code": "confirmed"}]
         },
@@ -194,13 +283,17 @@ def icd(code: str, display: str) -> Resource:
     return {"coding": [{"system": ICD, "code": code, "display": display}]}
 
 
-def allergy(drug: str, reaction: str | None = None, *, recorded: str = "2023-04-02", kind: str = "allergy", **more: Any) -> Resource:
+def allergy(
+    drug: str, reaction: str | None = None, *, recorded: str = "2023-04-02", kind: str = "allergy", **more: Any
+) -> Resource:
     """An AllergyIntolerance to a drug, with a coded reaction."""
     resource: Resource = {
         "resourceType": "AllergyIntolerance",
         "id": f"allergy-{drug.replace('/', '-').replace(' ', '-')}",
         "clinicalStatus": {
-            "coding": [{"system": "http://terminology.hl7.org/CodeSystem/allergyintolerance-clinical", "code": "active"}]
+            "coding": [
+                {"system": "http://terminology.hl7.org/CodeSystem/allergyintolerance-clinical", "code": "active"}
+            ]
         },
         "verificationStatus": {
             "coding": [

@@ -11,14 +11,19 @@ from collections.abc import Iterable, Sequence
 from dataclasses import dataclass, replace
 from datetime import timedelta
 
-from cds.cards.card import TIERS, Card, HeldBack, card_id
-from cds.cards.ordering import card_order, held_back_order, tier_of, urgency
-from cds.cards.wording import Wording, bases, headline, named_evidence, wanted_names
+from cds.cards.card import TIERS, Card, HeldBack, Tier, card_id
+from cds.cards.ordering import card_order, held_back_order, lead, tier_of
+from cds.cards.wording import Wording, bases, dose_words, headline, named_evidence, wanted_names
 from cds.clinical.findings import Evidence, Finding, TestProposal
 from cds.clinical.situation import Situation
 
 _ONE_CARD_A_RULE = ("check-potassium-creatinine", "confirm-still-taken")
 _EJECTION_FRACTION = "ejection-fraction-missing"
+_OFFERING = ("start", "switch", "raise", "lower")
+_SILENT_UNKNOWN = ("lab-out-of-range",)  # the timed checks and the start rules ask for what is missing
+_VALUES: tuple[tuple[str, ...], ...] = (("topic", "value:potassium"), ("topic", "value:kidney"))
+_CHECK, _NEEDED, _REPEAT = ("open", "check-potassium-creatinine"), ("needed", "tests"), ("blocked", "repeat")
+_SAME_SAMPLE = {"potassium", "creatinine"}  # one blood sample gives both
 
 
 @dataclass(frozen=True, slots=True)
@@ -39,7 +44,7 @@ def make_cards(situation: Situation, findings: Sequence[Finding], wording: Wordi
     cards: list[Card] = []
     held_back: list[HeldBack] = []
     for group in _absorb(groups):
-        ordered = sorted(group, key=lambda f: (_strength(f), urgency(f)))
+        ordered = sorted(group, key=lead)
         card = _card(situation, ordered, wording)
         cards.append(card)
         held_back.extend(
@@ -52,22 +57,29 @@ def make_cards(situation: Situation, findings: Sequence[Finding], wording: Wordi
             )
             for finding in ordered[1:]
         )
-    return CardSet(tuple(sorted(cards, key=card_order)), tuple(sorted(held_back, key=held_back_order)))
+    shown = sorted(cards, key=lambda card: card_order(card, wording.rule_order))
+    return CardSet(tuple(shown), tuple(sorted(held_back, key=held_back_order)))
 
 
 def _group(finding: Finding) -> tuple[str, ...] | None:
     """Which card a finding goes to; None where it makes none."""
     match finding.outcome:
         case "open":
+            if finding.topic is not None:
+                return "topic", finding.topic
             if finding.rule in (*_ONE_CARD_A_RULE, _EJECTION_FRACTION):
                 return "open", finding.rule
             return "open", finding.rule, finding.about or ""
         case "unknown":
+            if finding.rule in _SILENT_UNKNOWN:
+                return None
             if "left ventricular ejection fraction" in finding.missing:
                 return "open", _EJECTION_FRACTION
             if finding.test_proposals:
                 return "needed", "tests"
-            return "needed", finding.rule, *finding.missing
+            if finding.rule in _ONE_CARD_A_RULE:
+                return "needed", finding.rule
+            return "needed", *sorted(_without_resource(text) for text in finding.missing)
         case "blocked":
             if finding.action == "refer":
                 return "blocked", "refer"
@@ -76,18 +88,28 @@ def _group(finding: Finding) -> tuple[str, ...] | None:
             return None
 
 
+def _without_resource(text: str) -> str:
+    """What is missing, alike for all drugs: "daily dose", "NYHA class"."""
+    return text.partition(": ")[2].partition(" of ")[0] if "/" in text.partition(": ")[0] else text
+
+
 def _absorb(groups: dict[tuple[str, ...], list[Finding]]) -> Iterable[list[Finding]]:
-    """Let a card that already asks for tests take in the findings that wait for no other test."""
-    asked = groups.get(("open", "check-potassium-creatinine"))
-    waiting = [key for key in (("needed", "tests"), ("blocked", "repeat")) if key in groups]
-    taker = asked
-    for key in waiting:
-        if taker is None:
-            taker = groups[key]
-            continue
-        taken = [f for f in groups[key] if _tests(f) <= set().union(*(_tests(t) for t in taker))]
-        taker.extend(taken)
-        groups[key] = [f for f in groups[key] if f not in taken]
+    """Let a card that already asks for tests take in the findings that wait for no other test.
+
+    A value out of range asks for more than a check that is due, a check for more than a decision that waits.
+    """
+    ranked = [*_VALUES, _CHECK, _NEEDED, _REPEAT]
+    for position, key in enumerate(ranked):
+        for taker_key in ranked[:position]:
+            taker, group = groups.get(taker_key), groups.get(key)
+            if not taker or not group or (taker_key in _VALUES and key in _VALUES):
+                continue
+            asked = set[str]().union(*(_tests(finding) for finding in taker))
+            if asked & _SAME_SAMPLE:
+                asked |= _SAME_SAMPLE
+            taken = [finding for finding in group if _tests(finding) and _tests(finding) <= asked]
+            groups[taker_key] = [*taker, *taken]
+            groups[key] = [finding for finding in group if finding not in taken]
     return [group for group in groups.values() if group]
 
 
@@ -95,19 +117,17 @@ def _tests(finding: Finding) -> set[str]:
     return {test for proposal in finding.test_proposals for test in proposal.tests}
 
 
-def _strength(finding: Finding) -> int:
-    return ("open", "unknown", "blocked").index(finding.outcome)
-
-
 def _card(situation: Situation, findings: list[Finding], wording: Wording) -> Card:
     """One card; the first finding leads it, gives its id, rule and due date."""
     first = findings[0]
     key = first.action if first.action is not None else first.outcome
     words = wording.cards[first.rule, key]
-    alike = [f for f in findings if f.rule == first.rule or f.outcome == first.outcome]
+    alike = [f for f in findings if f.rule == first.rule and f.action == first.action]
+    if first.outcome != "open":
+        alike = [f for f in findings if f.outcome == first.outcome]
     subjects = [f.about for f in alike if f.about is not None]
     wanted = [name for f in alike for name in wanted_names(f, wording)]
-    tier = min((tier_of(wording.cards[f.rule, f.action or f.outcome].tier, f) for f in alike), key=TIERS.index)
+    tier = min((_tier(f, wording) for f in alike), key=TIERS.index)
     evidence = named_evidence((fact for f in findings for fact in f.evidence), wording)
     basis = bases(findings, wording)
     cautions = _cautions(situation, findings, any(b.checked == "memory" for b in basis), wording)
@@ -117,15 +137,21 @@ def _card(situation: Situation, findings: list[Finding], wording: Wording) -> Ca
         about=first.about,
         family=words.family,
         tier=tier,
-        headline=headline(words, first, subjects, wanted, wording),
+        headline=headline(words, first, subjects, wanted, dose_words(first), wording),
         because=tuple(dict.fromkeys(f.because for f in findings)),
         evidence=_without_repeats(evidence),
         basis=basis,
         due=first.due,
-        drug_proposals=first.drug_proposals,
+        drug_proposals=tuple(dict.fromkeys(p for f in findings if f.action in _OFFERING for p in f.drug_proposals)),
         test_proposals=_joined(findings),
         cautions=cautions,
         expires_on=situation.today + timedelta(days=wording.shown_for_days[tier]),
+    )
+
+
+def _tier(finding: Finding, wording: Wording) -> Tier:
+    return tier_of(
+        wording.cards[finding.rule, finding.action or finding.outcome].tier, finding, wording.tier_of_severity
     )
 
 

@@ -7,6 +7,7 @@ from dataclasses import dataclass, replace
 
 from cds.cards.card import LONGEST_HEADLINE, CardBasis, Family, Tier
 from cds.clinical.findings import Evidence, Finding
+from cds.clinical.readings import show
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -31,6 +32,8 @@ class Wording:
     units: Mapping[str, str]
     class_names: Mapping[str, str]
     shown_for_days: Mapping[str, int]  # by tier
+    tier_of_severity: Mapping[str, Tier]
+    rule_order: tuple[str, ...]  # within a tier and family
     recommendation_bases: Mapping[str, CardBasis]
     limit_bases: Mapping[str, CardBasis]
 
@@ -51,20 +54,42 @@ def listing(words: Iterable[str]) -> str:
 
 
 def headline(
-    words: CardWords, finding: Finding, subjects: Iterable[str], wanted: Iterable[str], wording: Wording
+    words: CardWords, finding: Finding, subjects: Iterable[str], wanted: Iterable[str], dose: str, wording: Wording
 ) -> str:
-    """Fill in the headline; one that grows too long ends in an ellipsis."""
-    proposals = [proposal.drug for proposal in finding.drug_proposals]
-    names = [wording.name(subject) for subject in subjects]
-    text = words.headline.format(
-        drug=proposals[0] if proposals else "",
-        drugs=listing(proposals),
-        subjects=listing(names),
-        course=listing(names),
-        tests=listing(wanted),
-    )
-    text = text[0].upper() + text[1:]
-    return text if len(text) <= LONGEST_HEADLINE else f"{text[: LONGEST_HEADLINE - 1].rstrip(' ,')}…"
+    """Fill in the headline. One that would grow too long names fewer of its items and says how many more there are."""
+    drugs = [proposal.drug for proposal in finding.drug_proposals]
+    names = list(dict.fromkeys(wording.name(subject) for subject in subjects))
+    tests = list(dict.fromkeys(wanted))
+    for most in range(max(len(names), len(tests), len(drugs), 1), 0, -1):
+        text = words.headline.format(
+            drug=drugs[0] if drugs else "",
+            drugs=_listing_of(drugs, most),
+            subjects=_listing_of(names, most),
+            course=_listing_of(names, most),
+            tests=_listing_of(tests, most),
+            why=finding.why,
+            dose=dose,
+        )
+        text = text[0].upper() + text[1:]
+        if len(text) <= LONGEST_HEADLINE:
+            return text
+    return f"{text[: LONGEST_HEADLINE - 1].rsplit(' ', 1)[0].rstrip(' ,:')}…"
+
+
+def _listing_of(items: list[str], most: int) -> str:
+    if len(items) <= most:
+        return listing(items)
+    return listing([*items[:most], f"{len(items) - most} more"])
+
+
+def dose_words(finding: Finding) -> str:
+    """The first proposed dose as a prescriber writes it; empty without one."""
+    if not finding.drug_proposals or finding.drug_proposals[0].dose_mg is None:
+        return ""
+    proposal = finding.drug_proposals[0]
+    amount = proposal.dose_name or f"{show(proposal.dose_mg or 0)} mg"
+    times = {1.0: "once a day", 2.0: "twice a day", 3.0: "three times a day", 0.5: "every other day"}
+    return f"{amount} {times.get(proposal.times_per_day or 1.0, '')}".strip()
 
 
 def wanted_names(finding: Finding, wording: Wording) -> tuple[str, ...]:

@@ -21,11 +21,14 @@ _EXPOSURES = ("administration", "dispense")
 
 
 def build_courses(record: PatientRecord, as_of: datetime, supply: SupplyLimits) -> tuple[DrugCourse, ...]:
-    """One course for each drug of the record, sorted by drug. `record` must hold nothing dated after `as_of`."""
-    by_drug: dict[str, list[MedicationEntry]] = defaultdict(list)
+    """One course for each drug of the record, sorted by drug; what is given into the vein is one of its own.
+
+    `record` must hold nothing dated after `as_of`.
+    """
+    by_drug: dict[tuple[str, bool], list[MedicationEntry]] = defaultdict(list)
     for entry in record.medications:
-        by_drug[entry.drug].append(entry)
-    return tuple(_Builder(by_drug[drug], as_of, supply).course() for drug in sorted(by_drug))
+        by_drug[entry.drug, _is_episode(entry, supply)].append(entry)
+    return tuple(_Builder(by_drug[key], as_of, supply).course() for key in sorted(by_drug))
 
 
 @dataclass(frozen=True, slots=True)
@@ -44,7 +47,9 @@ class _Builder:
 
     def __init__(self, entries: Sequence[MedicationEntry], as_of: datetime, supply: SupplyLimits) -> None:
         self.as_of, self.today, self.supply = as_of, as_of.date(), supply
-        self.exposures = sorted((e for e in entries if e.kind in _EXPOSURES and _began(e)), key=_oldest_first)
+        self.is_episode = _is_episode(entries[0], supply)
+        self.witnesses = sorted((e for e in entries if _tells_start(e)), key=_oldest_first)
+        self.exposures = [e for e in self.witnesses if e.kind in _EXPOSURES]
         ordering = [e for e in entries if e.kind not in _EXPOSURES]
         if not ordering:
             ordering = [e for e in entries if e.kind in _EXPOSURES]
@@ -56,19 +61,16 @@ class _Builder:
         if not self.orders:
             return self._planned_course()
         current = self._current()
-        first = current[0]
-        state = first.state
+        first, state = current[0], current[0].state
         dose, notes = self._dose(current)
         history = self._history()
         started, changed, changed_by = self._run(history, first)
-        is_running = state in ("active", "unclear", "paused")
         stale = state == "active" and self._is_stale(current)
-        older = self._older_running(current) if is_running else []
+        older = self._older_running(current) if state in ("active", "unclear", "paused") else []
         newer_end = self._stopped_after(current) if state == "active" else None
         if stale or newer_end is not None:
             notes.append(_stale_note(first, newer_end))
         notes.extend(_superseded_note(order) for order in older)
-        ended = self._ended() if state == "ended" else None
         sources = dict.fromkeys([*(o.entry.source for o in current), *(o.entry.source for o in self.orders)])
         exposed = dict.fromkeys(e.source for e in reversed(self.exposures))
         return DrugCourse(
@@ -84,12 +86,14 @@ class _Builder:
             max_daily_dose_mg=dose.max_daily_mg,
             daily_dose_other=dose.other,
             dose_note=dose.note,
+            ordered=_written(first.entry),
             started=started,
             changed=changed,
             changed_by=changed_by,
-            ended=ended,
+            ended=self._ended() if state == "ended" else None,
             as_needed=dose.as_needed,
             stale=stale or newer_end is not None,
+            is_episode=self.is_episode,
             reasons=first.entry.reasons,
             history=history,
             notes=tuple(notes),
@@ -112,6 +116,8 @@ class _Builder:
             return ("active", None) if is_recent else ("ended", last)
         if entry.kind == "dispense":
             return self._dispensed(entry, begins)
+        if self.is_episode and entry.ends is None:
+            return self._episode(entry, begins)
         match entry.status:
             case "active":
                 return ("ended", entry.ends) if has_ended else ("active", None)
@@ -128,6 +134,11 @@ class _Builder:
                 return "ended", entry.ends if has_ended else self._updated(entry)
             case _:
                 return ("ended", entry.ends) if has_ended else ("unclear", None)
+
+    def _episode(self, entry: MedicationEntry, begins: PartialDate | None) -> tuple[CourseState, PartialDate | None]:
+        """An order for the vein is over after some days, whatever its status says."""
+        is_recent = begins is not None and (self.today - begins.latest).days <= self.supply.parenteral_episode_days
+        return ("active", None) if is_recent and entry.status in ("active", "completed") else ("ended", begins)
 
     def _dispensed(self, entry: MedicationEntry, begins: PartialDate | None) -> tuple[CourseState, PartialDate | None]:
         """A supply nobody wrote an order for: running while it lasts, and as long again as late refills are usual."""
@@ -180,15 +191,12 @@ class _Builder:
     def _older_running(self, current: list[_Order]) -> list[_Order]:
         sources = {o.entry.source for o in current}
         replaced = {o.entry.replaces for o in self.orders}
-        same_days = {o.day for o in current}
+        same_days = {None, *(o.day for o in current)}
         return [
             o
             for o in self.orders
-            if o.state == "active"
-            and o.entry.kind == "order"
-            and o.entry.source not in sources | replaced
-            and o.day is not None
-            and o.day not in same_days
+            if o.state == "active" and o.entry.kind == "order"
+            if o.day not in same_days and o.entry.source not in sources | replaced
         ]
 
     def _stopped_after(self, current: list[_Order]) -> _Order | None:
@@ -231,7 +239,9 @@ class _Builder:
             (undated if begins is None else days[begins.latest]).append(order)
         steps: list[tuple[DoseStep, list[_Order]]] = []
         for day in sorted(days):
-            steps.extend(self._steps_of(days[day]))
+            for step in self._steps_of(days[day]):
+                if not steps or not self._repeats(step, steps[-1]):
+                    steps.append(step)
         if not steps and undated:
             dose = resolve_dose(undated[0].entry.lines, self.today)
             return (DoseStep(daily_mg=dose.daily_mg, since=None, source=undated[0].entry.source),)
@@ -265,7 +275,9 @@ class _Builder:
         on = min(newest.begins.latest, self.today) if newest.begins is not None else self.today
         together = [o for o in unique if o.day == newest.day]
         dose = add_up(resolve_dose(o.entry.lines, on) for o in together)
-        return [(DoseStep(daily_mg=dose.daily_mg, since=newest.begins, source=newest.entry.source), orders)]
+        reasons = tuple(sorted({reason for o in orders for reason in o.entry.reasons}))
+        step = DoseStep(daily_mg=dose.daily_mg, since=newest.begins, source=newest.entry.source, reasons=reasons)
+        return [(step, orders)]
 
     def _is_gap(self, before: list[_Order], since: PartialDate | None) -> bool:
         """True if the drug was off between two steps: ended or on hold for a week or more, or out of supply for long."""
@@ -287,23 +299,24 @@ class _Builder:
         return bool(seen) and (since.earliest - max(seen)).days > self.supply.without_supply_days
 
     def _with_exposure(self, step: DoseStep, until: PartialDate | None) -> DoseStep:
-        """The step with its day 0: the first administration, else the first dispense, of it or in its time."""
-        if step.since is None:
-            return step
+        """The step with its day 0: the first administration, else dispense, else stated start, of it or in its time."""
         order = next(o for o in self.orders if o.entry.source == step.source)
-        if order.entry.kind in _EXPOSURES:
+        if step.since is None or order.entry.kind in _EXPOSURES:
             return step
-        for kind in _EXPOSURES:
-            for exposure in self.exposures:
-                began = _began(exposure)
-                if exposure.kind != kind or began is None:
-                    continue
-                is_linked = exposure.based_on == step.source
-                is_meanwhile = exposure.based_on is None and began.latest >= step.since.earliest
-                is_before_next = until is None or began.earliest < until.latest
-                if ((is_linked and began.latest >= step.since.earliest) or is_meanwhile) and is_before_next:
-                    return replace(step, since=began)
-        return step
+        kinds = _EXPOSURES if order.entry.kind == "statement" else (*_EXPOSURES, "statement")
+        found = [
+            when
+            for kind in kinds
+            for e in self.witnesses
+            if e.kind == kind and e.based_on in (None, step.source) and (when := _began(e)) is not None
+            if when.latest >= step.since.earliest and (until is None or when.earliest < until.latest)
+        ]
+        return replace(step, since=found[0]) if found else step
+
+    def _repeats(self, step: tuple[DoseStep, list[_Order]], before: tuple[DoseStep, list[_Order]]) -> bool:
+        """True if statements alone repeat the dose of the step before: evidence of that step, no step of their own."""
+        is_same = all(o.entry.kind == "statement" for o in step[1]) and step[0].daily_mg == before[0].daily_mg
+        return is_same and not self._is_gap(before[1], step[0].since)
 
     def _run(
         self, history: tuple[DoseStep, ...], first: _Order
@@ -345,6 +358,11 @@ class _Builder:
         )
 
 
+def _is_episode(entry: MedicationEntry, supply: SupplyLimits) -> bool:
+    """True for what is given into the vein of a class that is taken by mouth at home."""
+    return entry.route == "parenteral" and entry.drug_class in supply.parenteral_episode_classes
+
+
 def _written(entry: MedicationEntry) -> PartialDate | None:
     return entry.authored if entry.authored is not None else entry.starts
 
@@ -358,6 +376,14 @@ def _newest_first(entry: MedicationEntry) -> tuple[bool, date, float, date, bool
     written = _written(entry)
     when = recency(written) if written is not None else (date.min, float("-inf"), date.min)
     return (written is not None, *when, entry.kind == "order", entry.source)
+
+
+def _tells_start(entry: MedicationEntry) -> bool:
+    """A statement asserted on the day it is about says that the drug is taken, not since when."""
+    if entry.kind != "statement":
+        return entry.kind in _EXPOSURES and _began(entry) is not None
+    asserted = entry.authored.latest if entry.authored is not None else None
+    return entry.starts is not None and entry.starts.latest != asserted
 
 
 def _oldest_first(entry: MedicationEntry) -> tuple[date, float, date, str]:
@@ -383,7 +409,7 @@ def _stale_note(order: _Order, newer_end: _Order | None) -> CourseNote:
     if newer_end is not None:
         problem = f"is active though a newer order of the drug ({newer_end.entry.source}) was stopped"
     else:
-        problem = "is active though its supply ran out long ago, and nobody ended it"
+        problem = "is active, long past its supply or a year old without one, and nobody ended it"
     return CourseNote(
         source=source, path="status", problem=problem, fix="Ask whether the drug is taken, and end or renew the order"
     )

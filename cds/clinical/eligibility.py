@@ -5,67 +5,47 @@ Here stands the reasoning; every number, concept and word it uses is a row of th
 
 from __future__ import annotations
 
-from collections.abc import Iterable
-from dataclasses import dataclass, field
-from datetime import date, timedelta
-from typing import Literal
+from datetime import timedelta
 
 from cds.clinical.findings import Evidence
-from cds.clinical.readings import Reading, days_old, say_value, show_limit, value_in_words
+from cds.clinical.judgement import Answer as Answer
+from cds.clinical.judgement import Judgement as Judgement
+from cds.clinical.judgement import concerns
 from cds.clinical.record import DrugCourse, Intolerance, Problem
 from cds.clinical.situation import Situation, concepts_present
-from cds.clinical.tables import Barrier, DrugBarrier, Effect, Limit, Needed
+from cds.clinical.start_values import hold_measurements, hold_needs
+from cds.clinical.tables import Barrier, DrugBarrier, Effect
 from cds.clinical.timeline import PartialDate
 
-Answer = Literal["start", "review", "unknown", "block"]
+
+def judge(situation: Situation, drug: str, drug_class: str, *, leaving_out: frozenset[str] = frozenset()) -> Judgement:
+    """Hold every row that concerns the drug against the situation, but those whose id is in `leaving_out`."""
+    judgement = standing_against(situation, drug, drug_class, leaving_out=leaving_out)
+    _hold_reactions(situation, judgement)
+    hold_measurements(situation, judgement, concepts_present(situation))
+    return judgement
 
 
-@dataclass(slots=True)
-class Judgement:
-    """What stands for and against one candidate drug. `reasons` are sentences' halves, in the order found."""
-
-    drug: str
-    drug_class: str
-    blocks: list[str] = field(default_factory=list)
-    reviews: list[str] = field(default_factory=list)
-    missing: list[str] = field(default_factory=list)
-    evidence: list[Evidence] = field(default_factory=list)
-    limits: list[str] = field(default_factory=list)
-    fresh: list[str] = field(default_factory=list)  # values that are fresh enough, in words
-    wanted_tests: list[str] = field(default_factory=list)
-    needs_referral: bool = False
-    look_again: list[date] = field(default_factory=list)  # when a time-bound block is over
-    to_repeat: dict[str, int] = field(default_factory=dict)  # analyte: within how many days
-
-    @property
-    def answer(self) -> Answer:
-        """A block beats what is missing, what is missing beats a review: more data cannot lift a block."""
-        if self.blocks:
-            return "block"
-        if self.missing:
-            return "unknown"
-        return "review" if self.reviews else "start"
-
-    def add(self, effect: Effect, words: str, row: str, evidence: Iterable[Evidence] = ()) -> None:
-        {"block": self.blocks, "review": self.reviews, "missing": self.missing}[effect].append(words)
-        self.limits.append(row)
-        self.evidence.extend(evidence)
-
-
-def judge(situation: Situation, drug: str, drug_class: str) -> Judgement:
-    """Hold every row that concerns the drug against the situation."""
+def standing_against(
+    situation: Situation, drug: str, drug_class: str, *, leaving_out: frozenset[str] = frozenset()
+) -> Judgement:
+    """Only the recorded facts (problems, devices, other drugs) that stand against the drug, without its limits."""
     judgement = Judgement(drug, drug_class)
     present = concepts_present(situation)
     for barrier in situation.tables.barriers:
-        if _concerns(barrier.drug_classes, barrier.drugs, barrier.not_drugs, drug, drug_class) and present.isdisjoint(
-            barrier.unless
-        ):
+        is_meant = concerns(barrier.drug_classes, barrier.drugs, barrier.not_drugs, drug, drug_class)
+        if is_meant and barrier.id not in leaving_out and present.isdisjoint(barrier.unless):
             _hold_barrier(situation, barrier, judgement, present)
     for row in situation.tables.drug_barriers:
-        if _concerns(row.drug_classes, row.drugs, (), drug, drug_class):
+        if row.id not in leaving_out and concerns(row.drug_classes, row.drugs, (), drug, drug_class):
             _hold_drug_barrier(situation, row, judgement, present)
-    _hold_reactions(situation, judgement)
-    _hold_measurements(situation, judgement, present)
+    return judgement
+
+
+def what_is_missing(situation: Situation, drug: str, drug_class: str) -> Judgement:
+    """Only which needed values of the class are missing or stale, for a change of dose."""
+    judgement = Judgement(drug, drug_class)
+    hold_needs(situation, judgement, concepts_present(situation))
     return judgement
 
 
@@ -74,19 +54,13 @@ def stopping_barriers(situation: Situation, drug: str, drug_class: str) -> tuple
     present = concepts_present(situation)
     found = []
     for barrier in situation.tables.barriers:
-        if not barrier.stops or not _concerns(barrier.drug_classes, barrier.drugs, barrier.not_drugs, drug, drug_class):
+        if not barrier.stops or not concerns(barrier.drug_classes, barrier.drugs, barrier.not_drugs, drug, drug_class):
             continue
         held = Judgement(drug, drug_class)
         _hold_barrier(situation, barrier, held, present)
         if held.blocks:
             found.append(barrier)
     return tuple(found)
-
-
-def _concerns(
-    classes: tuple[str, ...], drugs: tuple[str, ...], not_drugs: tuple[str, ...], drug: str, drug_class: str
-) -> bool:
-    return drug_class in classes and (not drugs or drug in drugs) and drug not in not_drugs
 
 
 def _hold_barrier(situation: Situation, barrier: Barrier, judgement: Judgement, present: frozenset[str]) -> None:
@@ -179,13 +153,11 @@ def _hold_drug_barrier(situation: Situation, row: DrugBarrier, judgement: Judgem
 
 
 def _ended_within(situation: Situation, course: DrugCourse, hours: float) -> bool:
-    """True if the course may have ended within the hours before now; an end known to the day is the end of that day."""
+    """True if the course may have ended within the hours before now; an end known to the day is 23:59 of that day."""
     ended = course.ended or course.started
     if course.state != "ended" or ended is None:
         return False
-    if ended.at is not None:
-        return situation.as_of - ended.at < timedelta(hours=hours)
-    return situation.today - ended.latest <= timedelta(hours=hours)
+    return situation.as_of - ended.last_instant(situation.as_of.tzinfo) < timedelta(hours=hours)
 
 
 def _hold_reactions(situation: Situation, judgement: Judgement) -> None:
@@ -237,114 +209,6 @@ def _kind_words(intolerance: Intolerance) -> str:
 
 def _reaction_words(intolerance: Intolerance) -> str:
     return f" ({', '.join(r.replace('-', ' ') for r in intolerance.reactions)})" if intolerance.reactions else ""
-
-
-def _hold_measurements(situation: Situation, judgement: Judgement, present: frozenset[str]) -> None:
-    """Fresh values first, then every limit on them. A missing or stale value neither satisfies nor fails a limit."""
-    tables = situation.tables
-    stale: set[str] = set()
-    unusable = {"egfr", "creatinine"} if "dialysis" in present else set[str]()
-    for need in tables.needed:
-        if judgement.drug_class in need.drug_classes and unusable.isdisjoint(need.analytes):
-            _need_fresh(situation, need, judgement, stale)
-    if "egfr" in stale:  # one specimen gives both
-        stale.add("creatinine")
-    needed = {a for need in tables.needed if judgement.drug_class in need.drug_classes for a in need.analytes}
-    for limit in tables.limits:
-        if limit.analyte in stale | unusable or not _limit_concerns(situation, limit, judgement, present):
-            continue
-        readings = situation.readings(limit.analyte)
-        if limit.analyte not in needed and limit.analyte != "creatinine":
-            days = tables.optional_within_days
-            readings = tuple(r for r in readings if days_old(r.taken, situation.today) <= days)
-        _hold_limit(situation, limit, readings, judgement)
-
-
-def _need_fresh(situation: Situation, need: Needed, judgement: Judgement, stale: set[str]) -> None:
-    """Note what is missing or stale; a fresh value supports."""
-    known = [reading for analyte in need.analytes for reading in situation.readings(analyte)]
-    name = " or ".join(situation.tables.analyte_names.get(a, a) for a in need.analytes)
-    if not known:
-        judgement.missing.append(f"{name}: none on record")
-        judgement.evidence.append(Evidence(what=need.analytes[0], role="missing"))
-        judgement.wanted_tests.append(need.test)
-        stale.update(need.analytes)
-        return
-    newest = max(known, key=lambda r: (r.taken.latest, r.source))
-    within = need.within_days
-    if need.unstable_within_days is not None and _unstable_because(situation):
-        within = need.unstable_within_days
-    if days_old(newest.taken, situation.today) <= within:
-        judgement.evidence.append(newest.evidence("supports"))
-        judgement.fresh.append(value_in_words(newest, situation.tables))
-        return
-    why = f" ({_unstable_because(situation)})" if within != need.within_days else ""
-    judgement.missing.append(f"{name}: last on {newest.taken}, wanted within {within} days{why}")
-    judgement.evidence.append(newest.evidence("stale"))
-    judgement.wanted_tests.append(need.test)
-    stale.update(need.analytes)
-
-
-def _unstable_because(situation: Situation) -> str:
-    """Why values go stale sooner in this patient; empty if they do not (ruling 17)."""
-    for row in situation.tables.unstable:
-        if row.analyte is not None and row.sign is not None and row.value is not None and row.unit is not None:
-            for reading in situation.readings(row.analyte):
-                if row.unit in reading.by_unit and reading.holds(row.sign, row.value, row.unit):
-                    return f"{situation.tables.analyte_names.get(row.analyte, row.analyte)} was {reading.shown}"
-        for problem in situation.record.problems:
-            if problem.dated is None or frozenset(row.concepts).isdisjoint(problem.concepts):
-                continue
-            if row.within_days is None or days_old(problem.dated, situation.today) <= row.within_days:
-                return problem.display
-    return ""
-
-
-def _limit_concerns(situation: Situation, limit: Limit, judgement: Judgement, present: frozenset[str]) -> bool:
-    return (
-        _concerns(limit.drug_classes, limit.drugs, limit.not_drugs, judgement.drug, judgement.drug_class)
-        and present.isdisjoint(limit.unless)
-        and (not limit.phenotypes or situation.phenotype.kind in limit.phenotypes)
-    )
-
-
-def _hold_limit(situation: Situation, limit: Limit, readings: tuple[Reading, ...], judgement: Judgement) -> None:
-    """Apply the limit to each of the newest day's values: the one that blocks decides (rulings 2 and 3)."""
-    sex = situation.record.sex
-    if limit.sex is not None and sex in ("male", "female") and sex != limit.sex:
-        return
-    for reading in readings:
-        value, unit = _printed_in(limit, reading)
-        if unit not in reading.by_unit:
-            continue
-        holds = reading.holds(limit.sign, value, unit)
-        name = situation.tables.unit_names.get(unit, unit)
-        said = f"{say_value(reading, situation.tables)} is {_SIGN_WORDS[limit.sign]} {show_limit(limit.analyte, value, unit)} {name}"
-        if holds and limit.sex is not None and sex not in ("male", "female"):
-            holds = None
-        if holds:
-            judgement.add(limit.effect, said, limit.id, [reading.evidence("limits")])
-            if limit.repeat_within_days is not None:
-                judgement.to_repeat[limit.analyte] = limit.repeat_within_days
-            return
-        if holds is None:
-            name = situation.tables.analyte_names.get(limit.analyte, limit.analyte)
-            judgement.missing.append(
-                f"{name}: {say_value(reading, situation.tables)} leaves open whether it is {_SIGN_WORDS[limit.sign]} {show_limit(limit.analyte, value, unit)}"
-            )
-            judgement.wanted_tests.append(limit.analyte)
-            judgement.evidence.append(reading.evidence("limits"))
-            return
-
-
-_SIGN_WORDS = {"<": "below", "<=": "at or below", ">": "above", ">=": "at or above"}
-
-
-def _printed_in(limit: Limit, reading: Reading) -> tuple[float, str]:
-    """The limit in the unit of the report, where the source prints both."""
-    if limit.also_value is not None and limit.also_unit == reading.unit:
-        return limit.also_value, limit.also_unit
-    return limit.value, limit.unit
 
 
 def _problem(problem: Problem) -> Evidence:

@@ -7,8 +7,12 @@ from datetime import datetime
 
 from cds.clinical.findings import Finding
 from cds.clinical.record import PatientRecord
+from cds.clinical.rules.arni import switch_to_arni
 from cds.clinical.rules.data import confirm_still_taken, ejection_fraction_missing
+from cds.clinical.rules.doses import lower_dose, raise_dose
+from cds.clinical.rules.labs import lab_out_of_range
 from cds.clinical.rules.monitoring import check_potassium_creatinine
+from cds.clinical.rules.safety import interaction, stop_harmful_drug
 from cds.clinical.rules.therapy import start_beta_blocker, start_mra, start_ras_inhibitor, start_sglt2_inhibitor
 from cds.clinical.situation import Situation, understand
 from cds.clinical.tables import ClinicalTables
@@ -16,10 +20,16 @@ from cds.clinical.tables import ClinicalTables
 Rule = Callable[[Situation], tuple[Finding, ...]]
 
 RULES: tuple[Rule, ...] = (
+    stop_harmful_drug,
+    interaction,
+    lab_out_of_range,
+    lower_dose,
     start_ras_inhibitor,
     start_beta_blocker,
     start_mra,
     start_sglt2_inhibitor,
+    switch_to_arni,
+    raise_dose,
     check_potassium_creatinine,
     ejection_fraction_missing,
     confirm_still_taken,
@@ -29,10 +39,16 @@ _START = ("start", "review", "unknown", "blocked", "refer")
 
 # What each rule may put on a card: its actions, and "unknown" or "blocked" where those ask for something.
 ANSWERS: Mapping[str, tuple[str, ...]] = {
+    "stop-harmful-drug": ("stop", "review", "unknown"),
+    "interaction": ("stop", "review"),
+    "lab-out-of-range": ("test", "review"),
+    "lower-dose": ("lower", "review"),
     "start-ras-inhibitor": _START,
     "start-beta-blocker": (*_START, "switch"),
     "start-mra": _START,
     "start-sglt2-inhibitor": _START,
+    "switch-to-arni": ("switch", "review", "unknown", "refer"),
+    "raise-dose": ("raise", "review", "unknown"),
     "check-potassium-creatinine": ("test", "unknown"),
     "ejection-fraction-missing": ("test",),
     "confirm-still-taken": ("document",),

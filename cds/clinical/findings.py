@@ -8,6 +8,7 @@ from typing import Literal
 
 Outcome = Literal["open", "met", "blocked", "unknown", "not-applicable"]
 Action = Literal["start", "raise", "lower", "switch", "stop", "review", "test", "refer", "document"]
+Severity = Literal["contraindicated", "major", "caution"]
 Role = Literal["supports", "limits", "missing", "stale"]
 
 
@@ -89,6 +90,9 @@ class Finding:
     test_proposals: tuple[TestProposal, ...] = ()
     opened_by: tuple[str, ...] = ()  # the courses or problems it stands on: part of the card's id
     cautions: tuple[str, ...] = ()  # keys of the wording table
+    severity: Severity | None = None  # of a danger; None where the rule's own tier holds
+    topic: str | None = None  # findings of one topic share a card: "drug:ibuprofen", "value:potassium"
+    why: str = ""  # the reason in a few words, for a headline
 
     def __post_init__(self) -> None:
         if self.outcome == "open" and self.action is None:

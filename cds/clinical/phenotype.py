@@ -70,8 +70,11 @@ def determine_phenotype(
     is_exact = measurement.comparator is None
     limits = tables.phenotype
     is_reduced = _classify(measurement.value, is_exact, reading, "<=", limits.reduced_at_most_percent)
-    evidence = (reading.evidence("supports"), *signs.evidence)
+    others = tuple(r for r in map(reading_of, newest) if r.source != reading.source and r.shown != reading.shown)
+    evidence = (reading.evidence("supports"), *(r.evidence("limits") for r in others), *signs.evidence)
     said = say_value(reading, tables)
+    if others:
+        said += f" (another value of that day is {others[0].shown} %: the lower one counts, to be reviewed)"
 
     def result(
         kind: PhenotypeKind, why: str, extra: tuple[str, ...] = (), more: tuple[Evidence, ...] = ()

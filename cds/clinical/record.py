@@ -107,6 +107,7 @@ class DoseStep:
     daily_mg: float | None
     since: PartialDate | None
     source: str
+    reasons: tuple[str, ...] = ()  # why its order was ended or held, as concept slugs
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -130,12 +131,14 @@ class DrugCourse:
     max_daily_dose_mg: float | None = None
     daily_dose_other: str | None = None
     dose_note: str = ""
+    ordered: PartialDate | None = None  # the newest order's own date
     started: PartialDate | None = None
     changed: PartialDate | None = None
     changed_by: Literal["start", "increase", "decrease"] | None = None
     ended: PartialDate | None = None
     as_needed: bool = False
     stale: bool = False
+    is_episode: bool = False  # given into the vein beside the therapy by mouth: over soon, whatever its status says
     reasons: tuple[str, ...] = ()
     history: tuple[DoseStep, ...] = ()
     notes: tuple[CourseNote, ...] = ()
@@ -245,6 +248,7 @@ class OtherMedicine:
     reason: str
     source: str
     status: str
+    dated: PartialDate | None = None
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -296,6 +300,7 @@ class PatientRecord:
             encounters=tuple(
                 stay if known(stay.ends) else replace(stay, ends=None) for stay in self.encounters if known(stay.starts)
             ),
+            other_medicines=tuple(m for m in self.other_medicines if known(m.dated)),
             tests_ordered=tuple(order for order in self.tests_ordered if known(order.ordered)),
         )
 

@@ -67,7 +67,8 @@ def computed_egfr(record: PatientRecord, creatinine: Measurement) -> Reading | N
 def egfr_readings(record: PatientRecord) -> tuple[Reading, ...]:
     """The eGFR of the newest day: reported and computed ones, for the caller to take the one that blocks (ruling 2).
 
-    An MDRD value counts only where nothing else is known of that day. A day whose creatinine gives no eGFR (no birth
+    An older equation's value (MDRD) stands beside the computed one too: where they lie on two sides of a limit, the one
+    that blocks counts and both are shown. A day whose creatinine gives no eGFR (no birth
     date, a comparator) and that has no reported one is passed over.
     """
     by_day: dict[date, list[Measurement]] = defaultdict(list)
@@ -83,8 +84,6 @@ def _egfr_of_one_day(record: PatientRecord, measurements: Sequence[Measurement])
     reported = of_newest_day(m for m in measurements if m.analyte == "egfr")
     creatinines = of_newest_day(m for m in measurements if m.analyte == "creatinine")
     computed = [egfr for m in creatinines if (egfr := computed_egfr(record, m)) is not None]
-    if computed:
-        reported = tuple(m for m in reported if m.method != "mdrd" and m.rank < 2)
     return (*(reading_of(m) for m in reported), *computed)
 
 

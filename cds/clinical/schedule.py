@@ -76,17 +76,23 @@ def _early_window(early: list[ScheduledCheck], day_zero: date, taken: list[date]
 def _steady_window(
     steady: ScheduledCheck, early: list[ScheduledCheck], day_zero: date, taken: list[date], today: date
 ) -> Window | None:
-    """The steady check, once the early series is done or so far past that the steady one supersedes it."""
-    first_valid = day_zero + timedelta(days=early[0].opens_after_days) if early else day_zero
-    valid = [day for day in taken if day >= first_valid]
-    last_early_opens = day_zero + timedelta(days=early[-1].opens_after_days) if early else day_zero
-    is_series_done = any(day >= last_early_opens for day in valid) if early else True
-    if is_series_done:
+    """The steady check, once a result closed the early series, or opens after a result that closed part of it.
+
+    Repeats count from a result: with none since the start, the last early check stays outstanding however late it is.
+    Only rows without any early check count their first repeat from the start.
+    """
+    if not early:
+        valid = [day for day in taken if day >= day_zero]
         return _window(steady, valid[-1] if valid else day_zero)
-    unsatisfied = _window(steady, valid[-1] if valid else day_zero)
-    if unsatisfied.opens > today:
+    valid = [day for day in taken if day >= day_zero + timedelta(days=early[0].opens_after_days)]
+    if not valid:
         return None
-    return replace(unsatisfied, missed_before=_missed([_window(row, day_zero) for row in early], taken))
+    repeat = _window(steady, valid[-1])
+    if valid[-1] >= day_zero + timedelta(days=early[-1].opens_after_days):
+        return repeat
+    if repeat.opens > today:
+        return None
+    return replace(repeat, missed_before=_missed([_window(row, day_zero) for row in early], taken))
 
 
 def _missed(windows: Iterable[Window], taken: Sequence[date]) -> int:

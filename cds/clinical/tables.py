@@ -7,30 +7,11 @@ from dataclasses import dataclass
 from typing import Literal
 
 from cds.clinical.findings import Action
-
-Sign = Literal["<", "<=", ">", ">="]
-Effect = Literal["block", "review", "missing"]
-PhenotypeKind = Literal[
-    "none",
-    "unclassified",
-    "pre-hf",
-    "hfref",
-    "hfimpef",
-    "hfmref",
-    "hfpef",
-    "high-output",
-    "right-sided",
-]
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class Basis:
-    """Where a row comes from. `checked` is "read" (in the source) or "memory"; `kind` is "source" or "policy" (ours)."""
-
-    source: str  # key of sources.toml
-    locator: str
-    checked: Literal["read", "memory"]
-    kind: Literal["source", "policy"] = "source"
+from cds.clinical.safety_tables import SafetyTables
+from cds.clinical.table_parts import Basis as Basis
+from cds.clinical.table_parts import Effect as Effect
+from cds.clinical.table_parts import PhenotypeKind as PhenotypeKind
+from cds.clinical.table_parts import Sign as Sign
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -211,7 +192,7 @@ class DoseRow:
 class ScheduledCheck:
     """A test wanted after a start, an increase, or again and again. Days count from the trigger.
 
-    For "steady" they count from the last valid result (or the trigger while there is none).
+    For "steady" they count from the last valid result (or the trigger, where no early check precedes it).
     """
 
     id: str
@@ -287,6 +268,8 @@ class SupplyLimits:
     without_supply_days: int
     correction_days: int
     hold_restart_days: int
+    parenteral_episode_days: int
+    parenteral_episode_classes: tuple[str, ...]  # given into the vein these are episodes, not home therapy
     basis: Basis
 
 
@@ -311,5 +294,6 @@ class ClinicalTables:
     phenotype: PhenotypeLimits
     concepts: ConceptGroups
     supply: SupplyLimits
+    safety: SafetyTables
     analyte_names: Mapping[str, str]
     unit_names: Mapping[str, str]

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import calendar
 from dataclasses import dataclass
-from datetime import date, datetime, timedelta
+from datetime import date, datetime, time, timedelta, tzinfo
 
 _WHOLE_CALENDAR = date.max.toordinal()  # days
 
@@ -48,6 +48,10 @@ class PartialDate:
         if self.at is not None:
             return self.at <= as_of
         return self.earliest <= as_of.date()
+
+    def last_instant(self, zone: tzinfo | None) -> datetime:
+        """The instant, or the last minute of the latest day it may be."""
+        return self.at if self.at is not None else datetime.combine(self.latest, time(23, 59), zone)
 
     def age_in_days(self, as_of: date) -> tuple[int, int]:
         """Fewest and most days from this date to `as_of`."""

@@ -103,7 +103,7 @@ _RELEASES = ("", "IR", "ER", "DR")
 _UNITS = ("", "MG", "MCG", "MG/ML", "MG/MG", "MG/ACTUAT", "MEQ", "MEQ/ML", "MMOL", "UNT/ML")
 _KINDS: Mapping[str, tuple[MatchedBy, int]] = {
     "product": ("product-code", RANKS["product"]),
-    "component": ("product-code", RANKS["product"]),
+    "component": ("form-code", RANKS["form"]),
     "pack": ("product-code", RANKS["product"]),
     "ingredient": ("ingredient-code", RANKS["ingredient"]),
     "precise": ("ingredient-code", RANKS["precise"]),

@@ -5,16 +5,27 @@ from __future__ import annotations
 import hashlib
 import string
 import tomllib
-from collections.abc import Iterable, Iterator, Mapping
+from collections.abc import Iterable, Mapping
 from dataclasses import dataclass, replace
 from functools import cache
 from importlib.resources import files
 from typing import Any
 
-from cds.cards.card import FAMILIES, TIERS, CardBasis
+from cds.cards.card import FAMILIES, TIERS, CardBasis, Tier
 from cds.cards.wording import CardWords, Wording
 from cds.clinical import units
 from cds.clinical.evaluate import ANSWERS
+from cds.clinical.harm import SEVERITIES
+from cds.clinical.safety_tables import (
+    Harm,
+    Interaction,
+    OutOfRange,
+    SafetyLimits,
+    SafetyTables,
+    SwitchLimits,
+    SwitchStart,
+    TreatmentLimit,
+)
 from cds.clinical.tables import (
     Barrier,
     Basis,
@@ -44,16 +55,19 @@ from cds.fhir.drafts import OrderCodes
 _TABLES = (
     "classes.toml",
     "doses.toml",
+    "harms.toml",
+    "interactions.toml",
     "monitoring.toml",
     "phenotype.toml",
     "recommendations.toml",
     "sources.toml",
     "tests.toml",
     "therapy.toml",
+    "treatment.toml",
     "version.toml",
     "wording.toml",
 )
-_HEADLINE_FIELDS = frozenset({"drug", "drugs", "subjects", "course", "tests"})
+_HEADLINE_FIELDS = frozenset({"drug", "drugs", "subjects", "course", "tests", "why", "dose"})
 _REGION = "us"  # ruling 52; a site profile may say otherwise
 
 
@@ -162,8 +176,26 @@ def _clinical_tables(raw: Mapping[str, dict[str, Any]], sources: frozenset[str])
         phenotype=one("limits", PhenotypeLimits),
         concepts=one("concepts", ConceptGroups),
         supply=one("supply", SupplyLimits),
+        safety=_safety_tables(raw, sources),
         analyte_names=dict(wording["analytes"]),
         unit_names=dict(wording["units"]),
+    )
+
+
+def _safety_tables(raw: Mapping[str, dict[str, Any]], sources: frozenset[str]) -> SafetyTables:
+    treatment = raw["treatment.toml"]
+
+    def one(key: str, row_type: type[Row]) -> Row:
+        return make_row(row_type, treatment.get(key, {}), table="treatment.toml", name=key, sources=sources)
+
+    return SafetyTables(
+        harms=_rows(raw["harms.toml"], "harm", Harm, "harms.toml", sources),
+        interactions=_rows(raw["interactions.toml"], "interaction", Interaction, "interactions.toml", sources),
+        treatment_limits=_rows(treatment, "treatment_limit", TreatmentLimit, "treatment.toml", sources),
+        out_of_range=_rows(treatment, "out_of_range", OutOfRange, "treatment.toml", sources),
+        limits=one("values", SafetyLimits),
+        switch_starts=_rows(treatment, "switch_start", SwitchStart, "treatment.toml", sources),
+        switch=one("switch", SwitchLimits),
     )
 
 
@@ -211,15 +243,38 @@ def _card_basis(basis: Basis, sources: Mapping[str, Any], recommendation: Recomm
     )
 
 
-def _limit_rows(tables: ClinicalTables) -> Iterator[tuple[str, Basis]]:
-    rows: tuple[Limit | Barrier | DrugBarrier | ScheduledCheck, ...] = (
+def _limit_bases(tables: ClinicalTables, sources: Mapping[str, Any]) -> dict[str, CardBasis]:
+    """What every limit, barrier, schedule, dose and safety row rests on, by its id. Harm rows carry their own class."""
+    rows: tuple[Limit | Barrier | DrugBarrier | ScheduledCheck | DoseRow | TreatmentLimit | OutOfRange, ...] = (
         *tables.limits,
         *tables.barriers,
         *tables.drug_barriers,
         *tables.checks,
+        *tables.doses,
+        *tables.safety.treatment_limits,
+        *tables.safety.out_of_range,
     )
-    for row in rows:
-        yield row.id, row.basis
+    found = {row.id: _card_basis(row.basis, sources) for row in rows}
+    graded: tuple[Harm | Interaction, ...] = (*tables.safety.harms, *tables.safety.interactions)
+    for row in graded:
+        made = _card_basis(row.basis, sources)
+        found[row.id] = replace(made, recommendation=row.id, words=row.words, grade=row.grade, level=row.level)
+    return found
+
+
+def _tiers_of_severity(words: Mapping[str, Any]) -> dict[str, Tier]:
+    tiers = words.get("tier_of_severity", {})
+    for severity in SEVERITIES:
+        if tiers.get(severity) not in TIERS:
+            raise ContentError("wording.toml", "tier_of_severity", f"has no tier of ours for {severity}", "Add it.")
+    return {severity: _one_of(tiers[severity], TIERS) for severity in SEVERITIES}
+
+
+def _rule_order(words: Mapping[str, Any]) -> tuple[str, ...]:
+    rules = words.get("order", {}).get("rules", [])
+    if sorted(rules) != sorted(ANSWERS):
+        raise ContentError("wording.toml", "order.rules", "does not list every rule once", "Add or remove rules.")
+    return tuple(rules)
 
 
 def _wording(raw: Mapping[str, dict[str, Any]], tables: ClinicalTables) -> Wording:
@@ -246,8 +301,10 @@ def _wording(raw: Mapping[str, dict[str, Any]], tables: ClinicalTables) -> Wordi
         units=dict(words["units"]),
         class_names={slug: row.name for slug, row in tables.classes.items()},
         shown_for_days=dict(words["shown_for_days"]),
+        tier_of_severity=_tiers_of_severity(words),
+        rule_order=_rule_order(words),
         recommendation_bases={key: _card_basis(row.basis, sources, row) for key, row in tables.recommendations.items()},
-        limit_bases={key: _card_basis(basis, sources) for key, basis in _limit_rows(tables)},
+        limit_bases=_limit_bases(tables, sources),
     )
 
 

@@ -24,6 +24,7 @@ from cds.fhir.medications import read_medication
 from cds.fhir.observations import read_observation
 from cds.fhir.patient import read_patient
 from cds.fhir.procedures_devices import read_device, read_procedure
+from cds.fhir.stay_reasons import with_linked_reasons
 from cds.fhir.test_orders import read_service_request
 from cds.fhir.validate import refusal
 
@@ -97,6 +98,10 @@ def _record(
             found, rest = read_medication(resource, context, resolve=resolve)
             entries.extend(found)
             others.extend(rest)
+    orders_for_reasons = (order for kind in _MEDICATION_TYPES for order in resources.get(kind, ()))
+    encounters = with_linked_reasons(
+        encounters, resources.get("Condition", ()), orders_for_reasons, problems, entries, resolve
+    )
     return PatientRecord(
         patient=patient.reference,
         sex=facts.sex,

@@ -70,6 +70,13 @@ def without_brackets(text: str) -> str:
     return " ".join(_BRACKETS.sub(" ", text).split())
 
 
+def plain_text(text: object) -> str:
+    """A sender's text for counting and display: no brand in brackets, no invisible characters; "" for what is no text."""
+    return (
+        without_brackets("".join(c for c in text[:_LONGEST_TEXT] if c.isprintable())) if isinstance(text, str) else ""
+    )
+
+
 def words_of(text: str) -> list[str]:
     """The text as lower-case words and percent signs, without square brackets and punctuation."""
     return _WORD.findall(_BRACKETS.sub(" ", text.lower()).replace("'s", ""))

@@ -83,8 +83,16 @@ def read_medication(
         return (), ()
     route = route_of(_dosages(resource, kind)) if medicine.route is None else medicine.route
 
+    dates = _dates(resource, kind, place)
+
     def other(reason: str, display: str = "") -> OtherMedicine:
-        return OtherMedicine(display=display or medicine.display, reason=reason, source=source, status=status)
+        return OtherMedicine(
+            display=display or medicine.display,
+            reason=reason,
+            source=source,
+            status=status,
+            dated=dates.authored if dates.authored is not None else dates.starts,
+        )
 
     if not medicine.components:
         return (), (other(NOT_RECOGNISED),)
@@ -98,7 +106,6 @@ def read_medication(
     )
     if not used:
         return (), others
-    dates = _dates(resource, kind, place)
     doses = _doses(resource, kind, medicine, place, dates)
     first = used[0]
     read = _Reading(

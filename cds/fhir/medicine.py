@@ -8,7 +8,7 @@ from typing import Any
 
 from cds.clinical.record import MatchedBy, Route
 from cds.fhir.code_matches import DrugComponent, DrugMatch
-from cds.fhir.codings import codings_of, shown_text, texts_of, without_brackets, words_of
+from cds.fhir.codings import codings_of, plain_text, shown_text, texts_of, without_brackets, words_of
 from cds.fhir.dosage_words import strengths_in
 from cds.fhir.dose_amounts import ARNI, read_quantity
 from cds.fhir.intake import NotRecognised
@@ -272,4 +272,4 @@ def _count(concept: Mapping[str, Any], text: str, place: Place) -> None:
 
 
 def _short(text: object) -> str:
-    return text[:_LONGEST_COUNTED_TEXT] if isinstance(text, str) else ""
+    return plain_text(text)[:_LONGEST_COUNTED_TEXT]

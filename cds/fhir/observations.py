@@ -14,6 +14,7 @@ from cds.clinical.record import Measurement
 from cds.clinical.timeline import PartialDate
 from cds.errors import ResourceError
 from cds.fhir.codes import AnalyteMatch
+from cds.fhir.codings import plain_text
 from cds.fhir.dates import DateNotUnderstood, parse_date, parse_period
 from cds.fhir.haemolysis import is_haemolysed
 from cds.fhir.intake import Context, NotRecognised
@@ -238,7 +239,7 @@ def _note(
     parts = [
         *amount.notes,
         date_note,
-        match.note,
+        match.note if match.use not in _RANKS else None,  # remarks on a code that counts fully would be noise
         "matched by its text" if match.matched_by == "text" else None,
         "preliminary" if is_preliminary else None,
         "haemolysed" if haemolysed else None,
@@ -279,4 +280,4 @@ def _unknown(concept: Mapping[str, Any]) -> NotRecognised:
 
 
 def _short(text: object) -> str:
-    return text[:_LONGEST_COUNTED_TEXT] if isinstance(text, str) else ""
+    return plain_text(text)[:_LONGEST_COUNTED_TEXT]

@@ -14,7 +14,7 @@ from typing import Any
 
 from cds.clinical.record import Sex
 from cds.clinical.timeline import PartialDate
-from cds.fhir.codings import codings_of, texts_of
+from cds.fhir.codings import codings_of, plain_text, texts_of
 from cds.fhir.dates import DateNotUnderstood, parse_date, parse_period
 from cds.fhir.intake import Context, NotRecognised
 
@@ -203,4 +203,4 @@ def count_unknown(kind: str, concept: object, context: Context) -> None:
 
 
 def _short(text: object) -> str:
-    return text[:_LONGEST_COUNTED_TEXT] if isinstance(text, str) else ""
+    return plain_text(text)[:_LONGEST_COUNTED_TEXT]

@@ -157,9 +157,9 @@ def test_reported_and_computed_egfr_of_one_day_both_stand_so_the_one_that_blocks
     assert shown(person(creatinine(1.0), egfr(61))) == [("59.9", True), ("61", False)]
 
 
-def test_an_mdrd_value_gives_way_to_a_computed_one_and_stands_where_it_is_alone():
+def test_an_mdrd_value_stands_beside_a_computed_one_so_that_the_one_that_blocks_counts():
     mdrd = egfr(58, rank=2, method="mdrd")
-    assert shown(person(creatinine(1.0), mdrd)) == [("59.9", True)]
+    assert shown(person(creatinine(1.0), mdrd)) == [("58", False), ("59.9", True)]
     assert shown(person(mdrd)) == [("58", False)]
     assert shown(person(creatinine(1.0), mdrd, born=None)) == [("58", False)]
 

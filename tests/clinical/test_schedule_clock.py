@@ -51,10 +51,13 @@ SPEC = """
     2026-04-06 | none                   | week-4    | due              | 0            | 1      | day 35
     2026-04-07 | none                   | week-4    | overdue-in-grace | 1            | 1      | day 36
     2026-04-14 | none                   | week-4    | overdue          | 8            | 1      | day 43
-    2026-07-29 | none                   | week-4    | overdue          | 114          | 1      | the day before the steady check opens
-    2026-07-30 | none                   | half-year | due              | 0            | 2      | day 150 supersedes both
-    2026-08-31 | none                   | half-year | due              | 0            | 2      | day 182
-    2026-10-01 | none                   | half-year | overdue          | 31           | 2      | day 213
+    2026-07-29 | none                   | week-4    | overdue          | 114          | 1      | the steady check counts from a result
+    2026-08-02 | none                   | week-4    | overdue          | 118          | 1      | five months without any result
+    2026-10-01 | none                   | week-4    | overdue          | 178          | 1      | nor does day 213 change that
+    2026-08-02 | 2026-03-04             | week-4    | overdue          | 118          | 1      | a result that came too early is none
+    2026-08-01 | 2026-03-05             | week-4    | overdue          | 117          | 0      | day 149 after the only valid result
+    2026-08-02 | 2026-03-05             | half-year | due              | 0            | 1      | day 150 supersedes week 4
+    2026-09-04 | 2026-03-05             | half-year | overdue-in-grace | 1            | 1      | day 183 after the only valid result
     2026-03-08 | 2026-03-02             | week-1    | due              | 0            | 0      | the day of the start shows the old state
     2026-03-08 | 2026-03-04             | week-1    | due              | 0            | 0      | vignette 2: day 2 is too early
     2026-03-08 | 2026-03-05             | week-4    | not-due          | 0            | 0      | day 3 counts

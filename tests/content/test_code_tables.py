@@ -63,7 +63,9 @@ def test_every_measured_analyte_has_units():
 def test_every_concept_of_the_phenotype_stands_in_a_code_table():
     groups = dict(toml("phenotype.toml")["concepts"])
     del groups["heart_failure_only"]  # drug classes and drugs
+    reasons = set(groups.pop("adverse_reasons"))
     assert {concept for group in groups.values() for concept in group} - CONCEPTS == set()
+    assert reasons - CONCEPTS - WORD_ONLY_REACTIONS == set()
 
 
 def test_every_concept_and_reaction_of_the_therapy_table_stands_in_a_code_table():

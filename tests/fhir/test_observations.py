@@ -115,7 +115,7 @@ def test_unit_and_code_that_mean_the_same_agree_and_others_are_refused():
     ("value", "path"),
     [
         (quantity(4.5, "stones"), "valueQuantity.code"),
-        (quantity(4.5, "umol/L"), "valueQuantity.code"),  # a unit of creatinine, not of potassium
+        (quantity(4.5, "kg"), "valueQuantity.code"),  # a unit of weight, not of potassium
         ({"value": 4.5, "unit": "stones"}, "valueQuantity.unit"),
         ({"value": 4.5, "unit": "umol/L"}, "valueQuantity.unit"),
         ({"value": 4.5, "system": "urn:example:units", "code": "mmol/L"}, "valueQuantity.system"),

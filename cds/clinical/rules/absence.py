@@ -111,6 +111,7 @@ def _decide(situation: Situation, rule: str, pillar: str, absence: _Absence, jud
             limits=limits,
             test_proposals=(wanted,) if tests else (),
             opened_by=absence.opened_by,
+            severity="caution" if absence.indication.action == "review" else None,
         )
     recommendations = (absence.indication.recommendation,)
     return _all_blocked(situation, rule, pillar, intro, judgements, recommendations)
@@ -208,6 +209,7 @@ def _open(
         test_proposals=follow_up_tests(situation, chosen[0].drug_class, after="start") if action == "start" else (),
         opened_by=(*absence.opened_by, *(course.source for course in absence.wrong)),
         cautions=tuple(dict.fromkeys(f"start-{j.drug_class}" for j in chosen)),
+        severity="caution" if absence.indication.action == "review" else None,
     )
 
 

@@ -22,7 +22,7 @@ def ejection_fraction_missing(situation: Situation) -> tuple[Finding, ...]:
     fresh_days = situation.tables.phenotype.lvef_fresh_days
     evidence = situation.phenotype.evidence
     if newest:
-        reading = reading_of(newest[0])
+        reading = min((reading_of(m) for m in newest), key=lambda r: (r.by_unit["%"].low, r.source))  # as the phenotype
         if days_old(reading.taken, situation.today) <= fresh_days:
             because = f"{_capital(say_value(reading, situation.tables))}."
             return (met(EJECTION_FRACTION, because=because, evidence=(reading.evidence("supports"),)),)
@@ -61,7 +61,7 @@ def confirm_still_taken(situation: Situation) -> tuple[Finding, ...]:
     gate = situation.gate_for("data")
     if gate is not None:
         return (not_applicable(STILL_TAKEN, because=gate.words, source=gate.source),)
-    running = [course for course in situation.courses if course.state == "active"]
+    running = [course for course in situation.courses if course.state == "active" and not course.is_episode]
     if not running:
         return (not_applicable(STILL_TAKEN, because="No running drug order of a class used here."),)
     return tuple(_still_taken(course) for course in running)
@@ -73,14 +73,15 @@ def _still_taken(course: DrugCourse) -> Finding:
             what=course.drug,
             role="stale" if course.stale else "supports",
             resource=course.source,
-            date=str(course.started) if course.started is not None else None,
+            date=str(course.ordered) if course.ordered is not None else None,
         ),
     )
     if not course.stale:
         return met(
             STILL_TAKEN, about=course.drug, because=f"The order of {course.drug} is recent enough.", evidence=evidence
         )
-    because = f"The order of {course.drug} is still active though it ran out long ago, and nobody ended it: is it still taken?"
+    since = f" of {course.ordered}" if course.ordered is not None else ""
+    because = f"The order of {course.drug}{since} is still active, though long past its supply or a year old, and nobody ended it: is it still taken?"
     return Finding(
         rule=STILL_TAKEN,
         about=course.drug,

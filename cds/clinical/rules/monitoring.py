@@ -29,7 +29,7 @@ def check_potassium_creatinine(situation: Situation) -> tuple[Finding, ...]:
     watched = {drug_class for row in rows for drug_class in row.drug_classes}
     courses = [c for c in situation.courses if c.drug_class in watched and c.state in ("active", "paused", "unclear")]
     if not courses:
-        return (not_applicable(RULE, because="No drug that asks for these tests is on the list."),)
+        return (not_applicable(RULE, because="No ACE inhibitor, ARB, ARNI or MRA is on the list."),)
     return tuple(
         _check(situation, course, [r for r in rows if course.drug_class in r.drug_classes]) for course in courses
     )
@@ -216,13 +216,16 @@ def _last_result(situation: Situation, test: str) -> Evidence | None:
 
 
 def already_ordered(situation: Situation, tests: tuple[str, ...]) -> str | None:
-    """The active order that covers all of `tests` (eGFR covers creatinine) and is newer than their last result."""
+    """The active order of the first of `tests`, if each of them has one (eGFR covers creatinine) newer than its last result."""
+    found = [_order_of(situation, test) for test in tests]
+    return found[0] if found and None not in found else None
+
+
+def _order_of(situation: Situation, test: str) -> str | None:
+    last = max((r.taken.latest for r in _results(situation, test)), default=date.min)
     for order in situation.record.tests_ordered:
-        asked = set(order.analytes)
-        if order.is_draft or not all(asked & set(_ANY_OF.get(test, (test,))) for test in tests):
-            continue
-        last = max((r.taken.latest for test in tests for r in _results(situation, test)), default=date.min)
-        if order.ordered is None or order.ordered.latest >= last:
+        is_asked = not order.is_draft and not set(order.analytes).isdisjoint(_ANY_OF.get(test, (test,)))
+        if is_asked and (order.ordered is None or order.ordered.latest >= last):
             return order.source
     return None
 

@@ -5,10 +5,12 @@ from __future__ import annotations
 from datetime import UTC, datetime, time, tzinfo
 from typing import Any
 
-from cds.cards.card import Card
+from cds.cards.card import Card, HeldBack
 from cds.cards.folding import make_cards
+from cds.cards.ordering import held_back_order
 from cds.cards.shape import card_shape, finding_shape, gate_shape, held_back_shape, phenotype_shape
 from cds.clinical.evaluate import findings_in
+from cds.clinical.order_check import check_orders as check_drafts
 from cds.clinical.situation import Situation, understand
 from cds.content.load import Content
 from cds.errors import Issue
@@ -61,6 +63,73 @@ def describe_records(
     }
 
 
+def check_orders(
+    data: bytes, content: Content, *, as_of: datetime, limits: Limits = COMMAND_LINE_LIMITS
+) -> dict[str, Any]:
+    """Check the orders under the pen: the MedicationRequests of the input with status "draft". Raises as `assess` does.
+
+    Cards are only about these orders, and whatever else is of tier danger.
+    """
+    split = split_by_patient(read_json(data, limits), limits)
+    built = [(patient, _built(patient, content, as_of)) for patient in split.patients]
+    return {
+        "format": "gdmt-cards/order-check",
+        **_frame(content, as_of),
+        "checks": [_order_check(patient, one, content, as_of) for patient, one in built if one.record is not None],
+        "issues": _unowned(split, [one for _, one in built]),
+    }
+
+
+def _order_check(patient: PatientResources, built: BuiltRecord, content: Content, as_of: datetime) -> dict[str, Any]:
+    if built.record is None:
+        raise ValueError("a refused patient has no orders to check")
+    drafts = frozenset(
+        f"MedicationRequest/{resource['id']}"
+        for resource in patient.resources.get("MedicationRequest", ())
+        if resource.get("status") == "draft"
+    )
+    check = check_drafts(built.record, drafts, content.tables, as_of=as_of)
+    orders = []
+    said: set[tuple[str, str | None]] = set()
+    for order in check.orders:
+        made = make_cards(check.after, order.findings, content.wording)
+        said |= {(finding.rule, finding.about) for finding in order.findings}
+        orders.append(
+            {
+                "order": order.source,
+                "drugs": list(order.drugs),
+                "verdict": "cards" if made.cards else "closes" if order.closes else "clear",
+                "closes": list(order.closes),
+                "cards": [_card_shape(card, check.after, content) for card in made.cards],
+            }
+        )
+    rest = make_cards(check.after, [f for f in check.others if (f.rule, f.about) not in said], content.wording)
+    held_back = [
+        *rest.held_back,
+        *(
+            HeldBack(card_id=card.card_id, rule=card.rule, about=card.about, reason="not-about-this-order")
+            for card in rest.cards
+            if card.tier != "danger"
+        ),
+    ]
+    issues = [*built.issues, *course_issues(check.after.courses)]
+    return {
+        "patient": built.patient,
+        "orders": orders,
+        "cards": [_card_shape(card, check.after, content) for card in rest.cards if card.tier == "danger"],
+        "held_back": [held_back_shape(item) for item in sorted(held_back, key=held_back_order)],
+        "intake": {
+            "read": built.read,
+            "not_needed": built.not_needed,
+            "issues": [issue_shape(issue) for issue in issues],
+        },
+    }
+
+
+def _card_shape(card: Card, situation: Situation, content: Content) -> dict[str, Any]:
+    return card_shape(card, _drafts(card, situation, content), content.wording)
+
+
 def assess_patient(built: BuiltRecord, content: Content, *, as_of: datetime, trace: bool = False) -> dict[str, Any]:
     """Assess one patient whose record was built. The record must not be refused."""
     if built.record is None:
@@ -73,7 +142,7 @@ def assess_patient(built: BuiltRecord, content: Content, *, as_of: datetime, tra
         "patient": built.patient,
         "phenotype": phenotype_shape(situation.phenotype),
         "gates": [gate_shape(gate) for gate in situation.gates],
-        "cards": [card_shape(card, _drafts(card, situation, content), content.wording) for card in made.cards],
+        "cards": [_card_shape(card, situation, content) for card in made.cards],
         "held_back": [held_back_shape(item) for item in made.held_back],
         **({"findings": [finding_shape(finding) for finding in findings]} if trace else {}),
         "intake": {

@@ -24,6 +24,7 @@ Exit codes:
   70  an error of the program itself
 """
 _STRICT, _NO_PATIENT, _OWN_ERROR = 11, 13, 70
+_PATIENTS = ("assessments", "records", "checks")  # one list in each answer
 
 
 @click.group(context_settings={"help_option_names": ["-h", "--help"]}, epilog=EXIT_CODES)
@@ -88,6 +89,20 @@ def record(bundle: str, as_of: str | None, zone: str, strict: bool) -> None:
     _run(work, bundle, as_of, zone, strict=strict)
 
 
+@main.command("check-order", epilog=EXIT_CODES)
+@_input_options
+def check_order(bundle: str, as_of: str | None, zone: str, strict: bool) -> None:
+    """Check the orders under the pen (the MedicationRequests of BUNDLE.json with status "draft") and print the answer."""
+
+    def work(data: bytes, moment: datetime) -> dict[str, Any]:
+        from cds import assessment
+        from cds.content.load import load_content
+
+        return assessment.check_orders(data, load_content(), as_of=moment)
+
+    _run(work, bundle, as_of, zone, strict=strict)
+
+
 def _run(
     work: Callable[[bytes, datetime], dict[str, Any]], bundle: str, as_of: str | None, zone: str, *, strict: bool
 ) -> None:
@@ -107,7 +122,7 @@ def _run(
         )
     _print(answer)
     refused = _refused(answer)
-    if not answer.get("assessments", answer.get("records")):
+    if not next(answer[key] for key in _PATIENTS if key in answer):
         _stop(
             "the input holds no patient that can be assessed.\nSend each Patient in the same Bundle; see the issues.",
             _NO_PATIENT,
@@ -156,10 +171,8 @@ def _print(answer: dict[str, Any]) -> None:
 def _refused(answer: dict[str, Any]) -> int:
     """Count the refusals in an answer, of whatever patient."""
     issues = [*answer["issues"]]
-    for one in answer.get("assessments", ()):
-        issues += one["intake"]["issues"]
-    for one in answer.get("records", ()):
-        issues += one["issues"]
+    for one in next(answer[key] for key in _PATIENTS if key in answer):
+        issues += one["issues"] if "issues" in one else one["intake"]["issues"]
     return sum(issue["severity"] == "refused" for issue in issues)
 
 

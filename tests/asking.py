@@ -8,7 +8,7 @@ from typing import Any
 import orjson
 from builders import Resource, bundle
 
-from cds.assessment import assess, describe_records
+from cds.assessment import assess, check_orders, describe_records
 from cds.content.load import load_content
 from cds.fhir.dates import parse_as_of
 
@@ -60,3 +60,10 @@ def proposed(answer: Answer, rule: str) -> list[str]:
         for draft in card(answer, rule)["drafts"]
         if draft["resourceType"] == "MedicationRequest"
     ]
+
+
+def order_check_of(*resources: Resource, as_of: str, zone: tzinfo = UTC) -> Answer:
+    """The order check of the one patient of these resources."""
+    whole = check_orders(bundle(*resources), load_content(), as_of=parse_as_of(as_of, zone))
+    (only,) = orjson.loads(orjson.dumps(whole))["checks"]
+    return dict(only)

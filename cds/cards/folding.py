@@ -17,7 +17,7 @@ from cds.cards.wording import Wording, bases, dose_words, headline, named_eviden
 from cds.clinical.findings import Evidence, Finding, TestProposal
 from cds.clinical.situation import Situation
 
-_ONE_CARD_A_RULE = ("check-potassium-creatinine", "confirm-still-taken")
+_ONE_CARD_A_RULE = ("check-potassium-creatinine",)
 _EJECTION_FRACTION = "ejection-fraction-missing"
 _OFFERING = ("start", "switch", "raise", "lower")
 _SILENT_UNKNOWN = ("lab-out-of-range",)  # the timed checks and the start rules ask for what is missing
@@ -73,6 +73,8 @@ def _group(finding: Finding) -> tuple[str, ...] | None:
         case "unknown":
             if finding.rule in _SILENT_UNKNOWN:
                 return None
+            if finding.topic is not None:
+                return "topic", finding.topic
             if "left ventricular ejection fraction" in finding.missing:
                 return "open", _EJECTION_FRACTION
             if finding.test_proposals:

@@ -9,15 +9,24 @@ from __future__ import annotations
 from collections import defaultdict
 from collections.abc import Sequence
 from dataclasses import dataclass, replace
-from datetime import date, datetime, timedelta
+from datetime import date, datetime
 from typing import Literal
 
 from cds.clinical.doses import Dose, add_up, dose_starts, resolve_dose
+from cds.clinical.medication_entries import (
+    EXPOSURES,
+    began_on,
+    is_episode,
+    newest_first,
+    oldest_first,
+    regimen_key,
+    runs_out_on,
+    tells_start,
+    written_on,
+)
 from cds.clinical.record import CourseNote, CourseState, DoseStep, DrugCourse, MedicationEntry, PatientRecord
 from cds.clinical.tables import SupplyLimits
 from cds.clinical.timeline import PartialDate, recency
-
-_EXPOSURES = ("administration", "dispense")
 
 
 def build_courses(record: PatientRecord, as_of: datetime, supply: SupplyLimits) -> tuple[DrugCourse, ...]:
@@ -27,7 +36,7 @@ def build_courses(record: PatientRecord, as_of: datetime, supply: SupplyLimits) 
     """
     by_drug: dict[tuple[str, bool], list[MedicationEntry]] = defaultdict(list)
     for entry in record.medications:
-        by_drug[entry.drug, _is_episode(entry, supply)].append(entry)
+        by_drug[entry.drug, is_episode(entry, supply)].append(entry)
     return tuple(_Builder(by_drug[key], as_of, supply).course() for key in sorted(by_drug))
 
 
@@ -47,13 +56,13 @@ class _Builder:
 
     def __init__(self, entries: Sequence[MedicationEntry], as_of: datetime, supply: SupplyLimits) -> None:
         self.as_of, self.today, self.supply = as_of, as_of.date(), supply
-        self.is_episode = _is_episode(entries[0], supply)
-        self.witnesses = sorted((e for e in entries if _tells_start(e)), key=_oldest_first)
-        self.exposures = [e for e in self.witnesses if e.kind in _EXPOSURES]
-        ordering = [e for e in entries if e.kind not in _EXPOSURES]
+        self.is_episode = is_episode(entries[0], supply)
+        self.witnesses = sorted((e for e in entries if tells_start(e)), key=oldest_first)
+        self.exposures = [e for e in self.witnesses if e.kind in EXPOSURES]
+        ordering = [e for e in entries if e.kind not in EXPOSURES]
         if not ordering:
-            ordering = [e for e in entries if e.kind in _EXPOSURES]
-        orders = sorted((self._order(e) for e in ordering), key=lambda o: _newest_first(o.entry), reverse=True)
+            ordering = [e for e in entries if e.kind in EXPOSURES]
+        orders = sorted((self._order(e) for e in ordering), key=lambda o: newest_first(o.entry), reverse=True)
         self.planned = [o for o in orders if o.state == "planned"]
         self.orders = [o for o in orders if o.state != "planned"]  # newest first; undated ones last
 
@@ -86,7 +95,7 @@ class _Builder:
             max_daily_dose_mg=dose.max_daily_mg,
             daily_dose_other=dose.other,
             dose_note=dose.note,
-            ordered=_written(first.entry),
+            ordered=written_on(first.entry),
             started=started,
             changed=changed,
             changed_by=changed_by,
@@ -124,7 +133,7 @@ class _Builder:
             case "on-hold":
                 return ("ended", entry.ends) if has_ended else ("paused", None)
             case "completed":
-                runs_out = _runs_out(entry, begins)
+                runs_out = runs_out_on(entry, begins)
                 if entry.ends is None and runs_out is not None and runs_out.latest >= self.today:
                     return "active", None
                 if entry.ends is not None and not has_ended:
@@ -142,7 +151,7 @@ class _Builder:
 
     def _dispensed(self, entry: MedicationEntry, begins: PartialDate | None) -> tuple[CourseState, PartialDate | None]:
         """A supply nobody wrote an order for: running while it lasts, and as long again as late refills are usual."""
-        runs_out = _runs_out(entry, begins) or begins
+        runs_out = runs_out_on(entry, begins) or begins
         if runs_out is None:
             return "unclear", None
         is_covered = (self.today - runs_out.latest).days <= self.supply.past_supply_days
@@ -171,7 +180,7 @@ class _Builder:
         same_day = [o for o in kept if o.day == newest.day and o.state == newest.state]
         if any(o.entry.kind == "order" for o in same_day):  # a statement of the same visit repeats the order
             same_day = [o for o in same_day if o.entry.kind == "order"]
-        return list({_regimen_key(o.entry): o for o in reversed(same_day)}.values())[::-1]
+        return list({regimen_key(o.entry): o for o in reversed(same_day)}.values())[::-1]
 
     def _dose(self, current: list[_Order]) -> tuple[Dose, list[CourseNote]]:
         on = self.today
@@ -179,7 +188,7 @@ class _Builder:
             on = min(on, current[0].over.latest)
         dose = add_up(resolve_dose(o.entry.lines, on) for o in current)
         has_dated = any(o.day is not None for o in current)
-        undated = [o for o in self.orders if o.state == "active" and _written(o.entry) is None and o not in current]
+        undated = [o for o in self.orders if o.state == "active" and written_on(o.entry) is None and o not in current]
         if not has_dated or not undated or current[0].state != "active":
             return dose, []
         note = "an undated active order stands beside a dated one, so which holds is not known"
@@ -210,20 +219,20 @@ class _Builder:
 
     def _is_stale(self, current: list[_Order]) -> bool:
         """True if the supply ran out long ago, or without a known supply the last sign of the drug is old (ruling 38)."""
-        run_outs = [_runs_out(o.entry, o.begins) for o in current]
-        run_outs += [_runs_out(e, _began(e)) for e in self.exposures]
+        run_outs = [runs_out_on(o.entry, o.begins) for o in current]
+        run_outs += [runs_out_on(e, began_on(e)) for e in self.exposures]
         known = [when.latest for when in run_outs if when is not None]
         if known:
             return (self.today - max(known)).days > self.supply.past_supply_days
-        seen = [when.latest for o in current if (when := o.begins or _written(o.entry)) is not None]
-        seen += [when.latest for e in self.exposures if (when := _began(e)) is not None]
+        seen = [when.latest for o in current if (when := o.begins or written_on(o.entry)) is not None]
+        seen += [when.latest for e in self.exposures if (when := began_on(e)) is not None]
         return bool(seen) and (self.today - max(seen)).days > self.supply.without_supply_days
 
     def _ended(self) -> PartialDate | None:
         """When the last of the ended orders ended; a later administration is the better witness of the last dose."""
         ends = [o.over for o in self.orders if o.over is not None]
         given = [
-            when for e in self.exposures if e.kind == "administration" and (when := e.ends or _began(e)) is not None
+            when for e in self.exposures if e.kind == "administration" and (when := e.ends or began_on(e)) is not None
         ]
         newest = self.orders[0]
         if newest.over is None and not given:
@@ -257,7 +266,7 @@ class _Builder:
     def _steps_of(self, orders: list[_Order]) -> list[tuple[DoseStep, list[_Order]]]:
         """The steps that orders beginning on one day give: one, or one for each bounded step of a single order."""
         written = [o for o in orders if o.entry.kind == "order"] or orders
-        unique = list({_regimen_key(o.entry): o for o in written}.values())
+        unique = list({regimen_key(o.entry): o for o in written}.values())
         newest = unique[0]
         if len(unique) == 1 and len(starts := dose_starts(newest.entry.lines)) > 1:
             return [
@@ -301,14 +310,14 @@ class _Builder:
     def _with_exposure(self, step: DoseStep, until: PartialDate | None) -> DoseStep:
         """The step with its day 0: the first administration, else dispense, else stated start, of it or in its time."""
         order = next(o for o in self.orders if o.entry.source == step.source)
-        if step.since is None or order.entry.kind in _EXPOSURES:
+        if step.since is None or order.entry.kind in EXPOSURES:
             return step
-        kinds = _EXPOSURES if order.entry.kind == "statement" else (*_EXPOSURES, "statement")
+        kinds = EXPOSURES if order.entry.kind == "statement" else (*EXPOSURES, "statement")
         found = [
             when
             for kind in kinds
             for e in self.witnesses
-            if e.kind == kind and e.based_on in (None, step.source) and (when := _began(e)) is not None
+            if e.kind == kind and e.based_on in (None, step.source) and (when := began_on(e)) is not None
             if when.latest >= step.since.earliest and (until is None or when.earliest < until.latest)
         ]
         return replace(step, since=found[0]) if found else step
@@ -356,52 +365,6 @@ class _Builder:
             dose_note=dose.note,
             as_needed=dose.as_needed,
         )
-
-
-def _is_episode(entry: MedicationEntry, supply: SupplyLimits) -> bool:
-    """True for what is given into the vein of a class that is taken by mouth at home."""
-    return entry.route == "parenteral" and entry.drug_class in supply.parenteral_episode_classes
-
-
-def _written(entry: MedicationEntry) -> PartialDate | None:
-    return entry.authored if entry.authored is not None else entry.starts
-
-
-def _began(entry: MedicationEntry) -> PartialDate | None:
-    return entry.starts if entry.starts is not None else entry.authored
-
-
-def _newest_first(entry: MedicationEntry) -> tuple[bool, date, float, date, bool, str]:
-    """Sort key, greatest first: dated before undated, newer before older, of one moment orders before statements."""
-    written = _written(entry)
-    when = recency(written) if written is not None else (date.min, float("-inf"), date.min)
-    return (written is not None, *when, entry.kind == "order", entry.source)
-
-
-def _tells_start(entry: MedicationEntry) -> bool:
-    """A statement asserted on the day it is about says that the drug is taken, not since when."""
-    if entry.kind != "statement":
-        return entry.kind in _EXPOSURES and _began(entry) is not None
-    asserted = entry.authored.latest if entry.authored is not None else None
-    return entry.starts is not None and entry.starts.latest != asserted
-
-
-def _oldest_first(entry: MedicationEntry) -> tuple[date, float, date, str]:
-    began = _began(entry)
-    return (*recency(began), entry.source) if began is not None else (date.max, 0.0, date.max, entry.source)
-
-
-def _regimen_key(entry: MedicationEntry) -> tuple[object, ...]:
-    """Two orders of one day with the same key are the same order written twice."""
-    return tuple((line.daily_mg, line.max_daily_mg, line.other, line.times, line.is_as_needed) for line in entry.lines)
-
-
-def _runs_out(entry: MedicationEntry, begins: PartialDate | None) -> PartialDate | None:
-    """The last day the supply of an entry covers, refills counted; None where no supply is known."""
-    if begins is None or entry.supply_days is None or entry.supply_days <= 0:
-        return None
-    days = min(entry.supply_days * (1 + entry.refills), timedelta.max.days)
-    return begins.plus_days(days)
 
 
 def _stale_note(order: _Order, newer_end: _Order | None) -> CourseNote:

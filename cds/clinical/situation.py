@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from collections.abc import Mapping
+from dataclasses import dataclass, field
 from datetime import date, datetime
 
 from cds.clinical.courses import build_courses
@@ -37,6 +38,7 @@ class Situation:
     gates: tuple[Gate, ...]
     tables: ClinicalTables
     as_of: datetime
+    first_doses: Mapping[str, datetime] = field(default_factory=dict)  # of orders under check, by drug
 
     @property
     def today(self) -> date:
@@ -64,13 +66,19 @@ _ALL_BUT_SAFETY = frozenset({"therapy", "dose", "tests", "renal-tests", "data"})
 _RENAL_TESTS = frozenset({"renal-tests"})
 
 
-def understand(record: PatientRecord, tables: ClinicalTables, *, as_of: datetime) -> Situation:
+def understand(
+    record: PatientRecord,
+    tables: ClinicalTables,
+    *,
+    as_of: datetime,
+    first_doses: Mapping[str, datetime] | None = None,
+) -> Situation:
     """Build the situation from what is known on `as_of`; anything dated later does not exist for any rule."""
     known = record.known_on(as_of)
     courses = build_courses(known, as_of, tables.supply)
     phenotype = determine_phenotype(known, courses, tables, as_of=as_of)
     gates = _gates(known, phenotype, tables, as_of.date())
-    return Situation(known, courses, phenotype, gates, tables, as_of)
+    return Situation(known, courses, phenotype, gates, tables, as_of, first_doses or {})
 
 
 def _gates(record: PatientRecord, phenotype: Phenotype, tables: ClinicalTables, today: date) -> tuple[Gate, ...]:

@@ -185,6 +185,7 @@ class DoseRow:
     nyha: tuple[int, ...] = ()
     regions: tuple[str, ...] = ()
     start_kind: Literal["low", "standard"] | None = None  # ARNI: by what was taken before
+    start_up_to_mg: float | None = None  # the top of the printed range of start doses
     names: Mapping[str, str]
 
 

@@ -16,6 +16,7 @@ from cds.cards.wording import CardWords, Wording
 from cds.clinical import units
 from cds.clinical.evaluate import ANSWERS
 from cds.clinical.harm import SEVERITIES
+from cds.clinical.order_check import ORDER_ANSWERS
 from cds.clinical.safety_tables import (
     Harm,
     Interaction,
@@ -272,7 +273,7 @@ def _tiers_of_severity(words: Mapping[str, Any]) -> dict[str, Tier]:
 
 def _rule_order(words: Mapping[str, Any]) -> tuple[str, ...]:
     rules = words.get("order", {}).get("rules", [])
-    if sorted(rules) != sorted(ANSWERS):
+    if sorted(rules) != sorted({**ANSWERS, **ORDER_ANSWERS}):
         raise ContentError("wording.toml", "order.rules", "does not list every rule once", "Add or remove rules.")
     return tuple(rules)
 
@@ -284,7 +285,7 @@ def _wording(raw: Mapping[str, dict[str, Any]], tables: ClinicalTables) -> Wordi
         for rule, by_action in words["cards"].items()
         for action, row in by_action.items()
     }
-    for rule, answers in ANSWERS.items():
+    for rule, answers in {**ANSWERS, **ORDER_ANSWERS}.items():
         for answer in answers:
             if (rule, answer) not in cards:
                 raise ContentError("wording.toml", f"cards.{rule}", f"has no words for '{answer}'", "Add them.")

@@ -71,6 +71,7 @@ def unknown(
     about: str | None = None,
     evidence: tuple[Evidence, ...] = (),
     recommendations: tuple[str, ...] = (),
+    topic: str | None = None,
 ) -> Finding:
     """It cannot be decided: `missing` names what is wanted."""
     return Finding(
@@ -81,4 +82,5 @@ def unknown(
         missing=missing,
         evidence=evidence,
         recommendations=recommendations,
+        topic=topic,
     )

@@ -8,6 +8,7 @@ from cds.clinical.readings import show
 from cds.clinical.record import DrugCourse
 from cds.clinical.renal import EGFR_UNIT, age_in_years
 from cds.clinical.rules.answers import blocked, met, not_applicable, unknown
+from cds.clinical.rules.data import OLD_ORDERS
 from cds.clinical.rules.pillars import course_evidence, nyha_or_surrogate
 from cds.clinical.safety_tables import SwitchStart
 from cds.clinical.situation import Situation, concepts_present
@@ -49,6 +50,13 @@ def _switch(situation: Situation) -> Finding:
         if c.state == "active" and not c.as_needed and c.drug_class in ("ace-inhibitor", "arb")
     ]
     kind = situation.phenotype.kind
+    if replaced and all(c.stale for c in replaced):
+        because = (
+            f"The order of {replaced[0].drug} is old: whether it is still taken must be confirmed before a switch."
+        )
+        missing = tuple(f"{c.source}: whether {c.drug} is still taken" for c in replaced)
+        facts = tuple(course_evidence(c, "stale") for c in replaced)
+        return unknown(RULE, about=_CLASS, because=because, missing=missing, evidence=facts, topic=OLD_ORDERS)
     if not replaced:
         return not_applicable(
             RULE, about=_CLASS, because="No ACE inhibitor or ARB is running that an ARNI could replace."

@@ -11,6 +11,7 @@ from cds.clinical.situation import Situation
 
 EJECTION_FRACTION = "ejection-fraction-missing"
 STILL_TAKEN = "confirm-still-taken"
+OLD_ORDERS = "old-orders"  # the topic of all that waits for this answer
 
 
 def ejection_fraction_missing(situation: Situation) -> tuple[Finding, ...]:
@@ -91,6 +92,7 @@ def _still_taken(course: DrugCourse) -> Finding:
         evidence=evidence,
         missing=(f"{course.source}: whether {course.drug} is still taken",),
         opened_by=course.sources[:1],
+        topic=OLD_ORDERS,
     )
 
 

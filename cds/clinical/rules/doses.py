@@ -11,6 +11,7 @@ from cds.clinical.readings import show
 from cds.clinical.record import DrugCourse
 from cds.clinical.rules.answers import blocked, met, not_applicable, unknown
 from cds.clinical.rules.arni import is_to_be_switched
+from cds.clinical.rules.data import OLD_ORDERS
 from cds.clinical.rules.pillars import closes, course_evidence
 from cds.clinical.situation import Situation
 from cds.clinical.starting import dose_row, follow_up_tests
@@ -77,6 +78,7 @@ def _raise(situation: Situation, course: DrugCourse) -> Finding:
             because=because,
             missing=(f"{course.source}: whether {about} is still taken",),
             evidence=evidence,
+            topic=OLD_ORDERS,
         )
     if course.changed is None:
         because = f"{name}: {share}. When the dose was last changed is not known, so it may be too early to raise it."

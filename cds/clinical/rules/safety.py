@@ -172,8 +172,9 @@ def _meet(situation: Situation, row: Interaction, one: DrugCourse, other: DrugCo
     if over.state != "ended" or ended is None:
         return False, None
     until = ended.last_instant(situation.as_of.tzinfo) + timedelta(hours=row.ended_within_hours)
-    begun = running.started.at if running.started is not None and running.started.at is not None else None
-    now = max(situation.as_of, begun) if begun is not None else situation.as_of
+    begun = running.started.at if running.started is not None else None
+    now = situation.as_of if begun is None else max(situation.as_of, begun)
+    now = situation.first_doses.get(running.drug, now)
     return (True, until) if now < until else (False, None)
 
 

@@ -1,0 +1,29 @@
+"""How long the properties run: few examples and always the same ones, unless GDMT_CARDS_EXAMPLES is "deep"."""
+
+from __future__ import annotations
+
+import os
+
+import pytest
+from hypothesis import HealthCheck, settings
+
+_SLOW_IS_FINE = [HealthCheck.too_slow, HealthCheck.data_too_large]
+
+settings.register_profile(
+    "few", max_examples=40, derandomize=True, database=None, deadline=None, suppress_health_check=_SLOW_IS_FINE
+)
+settings.register_profile(
+    "deep", max_examples=1000, database=None, deadline=None, print_blob=True, suppress_health_check=_SLOW_IS_FINE
+)
+_IS_DEEP = os.environ.get("GDMT_CARDS_EXAMPLES") == "deep"
+settings.load_profile("deep" if _IS_DEEP else "few")
+
+
+def pytest_collection_modifyitems(config: pytest.Config, items: list[pytest.Item]) -> None:
+    """Leave the tests marked `deep` to the deep run."""
+    if _IS_DEEP or config.option.markexpr:
+        return
+    long_runs = [item for item in items if item.get_closest_marker("deep")]
+    if long_runs:
+        config.hook.pytest_deselected(items=long_runs)
+        items[:] = [item for item in items if item not in long_runs]

@@ -20,7 +20,7 @@ from cds.clinical.situation import Situation
 _ONE_CARD_A_RULE = ("check-potassium-creatinine",)
 _EJECTION_FRACTION = "ejection-fraction-missing"
 _OFFERING = ("start", "switch", "raise", "lower")
-_SILENT_UNKNOWN = ("lab-out-of-range",)  # the timed checks and the start rules ask for what is missing
+_SILENT_UNKNOWN = ("lab-out-of-range", "lower-dose")  # the timed checks and the start rules ask for what is missing
 _VALUES: tuple[tuple[str, ...], ...] = (("topic", "value:potassium"), ("topic", "value:kidney"))
 _CHECK, _NEEDED, _REPEAT = ("open", "check-potassium-creatinine"), ("needed", "tests"), ("blocked", "repeat")
 _SAME_SAMPLE = {"potassium", "creatinine"}  # one blood sample gives both
@@ -122,7 +122,9 @@ def _tests(finding: Finding) -> set[str]:
 def _card(situation: Situation, findings: list[Finding], wording: Wording) -> Card:
     """One card; the first finding leads it, gives its id, rule and due date."""
     first = findings[0]
-    key = first.action if first.action is not None else first.outcome
+    key: str = first.action if first.action is not None else first.outcome
+    if first.asks_if_taken and (first.rule, f"{key}-if-taken") in wording.cards:
+        key = f"{key}-if-taken"
     words = wording.cards[first.rule, key]
     alike = [f for f in findings if f.rule == first.rule and f.action == first.action]
     if first.outcome != "open":

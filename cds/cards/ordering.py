@@ -46,7 +46,7 @@ def _is_overdue(due: Due) -> bool:
     return due.status in ("overdue", "overdue-in-grace")
 
 
-def lead(finding: Finding) -> tuple[int, int, int, date, int, str, str]:
+def lead(finding: Finding) -> tuple[int, int, int, bool, date, int, str, str]:
     """Sort key of the findings that share a card: the one that leads it comes first.
 
     Open before unknown before blocked; the most severe; stopping before lowering before testing; the earliest date.
@@ -56,4 +56,5 @@ def lead(finding: Finding) -> tuple[int, int, int, date, int, str, str]:
     action = _ACTIONS.index(finding.action) if finding.action is not None else len(_ACTIONS)
     due_by = due.due_by if due is not None else date.max
     overdue = -due.days_overdue_most if due is not None else 0
-    return _OUTCOMES.index(finding.outcome), severity, action, due_by, overdue, finding.rule, finding.about or ""
+    pair = finding.rule == "interaction"  # what a drug does by itself is said before what it does with others
+    return _OUTCOMES.index(finding.outcome), severity, action, pair, due_by, overdue, finding.rule, finding.about or ""

@@ -60,13 +60,15 @@ def headline(
     drugs = [proposal.drug for proposal in finding.drug_proposals]
     names = list(dict.fromkeys(wording.name(subject) for subject in subjects))
     tests = list(dict.fromkeys(wanted))
-    for most in range(max(len(names), len(tests), len(drugs), 1), 0, -1):
+    fewer = [(most, len(tests)) for most in range(max(len(names), 1), 0, -1)]
+    fewer += [(1, most) for most in range(len(tests) - 1, 0, -1)]
+    for most_names, most_tests in fewer:
         text = words.headline.format(
             drug=drugs[0] if drugs else "",
-            drugs=_listing_of(drugs, most),
-            subjects=_listing_of(names, most),
-            course=_listing_of(names, most),
-            tests=_listing_of(tests, most),
+            drugs=listing(drugs),
+            subjects=_listing_of(names, most_names),
+            course=_listing_of(names, most_names),
+            tests=_listing_of(tests, max(most_tests, 1)),
             why=finding.why,
             dose=dose,
         )

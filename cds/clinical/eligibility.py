@@ -149,6 +149,10 @@ def _hold_drug_barrier(situation: Situation, row: DrugBarrier, judgement: Judgem
                 )
             ]
             judgement.add(row.effect, f"{row.words} ({course.drug})", row.id, evidence)
+            last = course.ended or course.started
+            if row.ended_within_hours is not None and last is not None:
+                free = last.last_instant(situation.as_of.tzinfo) + timedelta(hours=row.ended_within_hours)
+                judgement.look_again.append(free.date())
             return
 
 

@@ -92,6 +92,7 @@ class Finding:
     cautions: tuple[str, ...] = ()  # keys of the wording table
     severity: Severity | None = None  # of a danger; None where the rule's own tier holds
     topic: str | None = None  # findings of one topic share a card: "drug:ibuprofen", "value:potassium"
+    asks_if_taken: bool = False  # an old order nobody ended: first ask whether the drug is taken
     why: str = ""  # the reason in a few words, for a headline
 
     def __post_init__(self) -> None:

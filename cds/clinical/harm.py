@@ -92,6 +92,22 @@ def check_harm(situation: Situation, course: DrugCourse) -> HarmCheck:
     return found
 
 
+def would_meet(situation: Situation, drug: str, drug_class: str) -> tuple[str, ...]:
+    """What a drug not yet taken would meet: a sentence for each running drug it must not, or hardly, be taken with."""
+    found: dict[str, None] = {}
+    for row in situation.tables.safety.interactions:
+        if row.severity == "caution" or row.third_classes or row.third_drugs or row.needs_concepts:
+            continue
+        is_one = drug in row.one_drugs if row.one_drugs else drug_class in row.one_classes
+        is_other = drug in row.other_drugs if row.other_drugs else drug_class in row.other_classes
+        for course in situation.courses:
+            meets_other = is_one and is_of(course, row.other_classes, row.other_drugs)
+            meets_one = is_other and is_of(course, row.one_classes, row.one_drugs)
+            if is_taken(course) and course.drug != drug and (meets_other or meets_one):
+                found[f"With {course.drug}: {row.words}."] = None
+    return tuple(found)
+
+
 def _hold(situation: Situation, row: Harm, course: DrugCourse, present: frozenset[str], found: HarmCheck) -> None:
     """Add the row's reason if all its conditions hold; note what is missing where that cannot be told."""
     if row.needs_concepts and present.isdisjoint(row.needs_concepts):

@@ -28,6 +28,7 @@ class Judgement:
     wanted_tests: list[str] = field(default_factory=list)
     needs_referral: bool = False
     look_again: list[date] = field(default_factory=list)  # when a time-bound block is over
+    held: set[tuple[str, Effect]] = field(default_factory=set)  # analytes a limit has spoken about
     to_repeat: dict[str, int] = field(default_factory=dict)  # analyte: within how many days
 
     @property

@@ -7,7 +7,7 @@ from dataclasses import dataclass
 from datetime import date, datetime, timedelta
 
 from cds.clinical.findings import Evidence
-from cds.clinical.readings import Reading, of_newest_day, reading_of, say_value, show, usable
+from cds.clinical.readings import Reading, of_newest_day, reading_of, say_value, sentence, show, usable
 from cds.clinical.record import DrugCourse, PatientRecord, Problem
 from cds.clinical.tables import ClinicalTables, PhenotypeKind
 from cds.clinical.timeline import PartialDate
@@ -64,7 +64,7 @@ def determine_phenotype(
     if not newest:
         return _without_lvef(record, signs, flags, tables)
     reading = min((reading_of(m) for m in newest), key=lambda r: (r.by_unit["%"].low, r.source))
-    if len({r.value for r in newest}) > 1:
+    if _lie_across_a_limit([m.value for m in newest], tables):
         flags = (*flags, "two-values-one-day")
     measurement = next(m for m in newest if m.source == reading.source)
     is_exact = measurement.comparator is None
@@ -73,7 +73,7 @@ def determine_phenotype(
     others = tuple(r for r in map(reading_of, newest) if r.source != reading.source and r.shown != reading.shown)
     evidence = (reading.evidence("supports"), *(r.evidence("limits") for r in others), *signs.evidence)
     said = say_value(reading, tables)
-    if others:
+    if others and "two-values-one-day" in flags:
         said += f" (another value of that day is {others[0].shown} %: the lower one counts, to be reviewed)"
 
     def result(
@@ -102,9 +102,9 @@ def determine_phenotype(
             return result("pre-hf", f"No sign of heart failure, but {structural[0].what}.", more=structural)
         return result("none", f"No sign of heart failure is recorded; {said}.")
     if is_reduced is None:
-        return result("unclassified", f"{_capital(signs.words)}; {said} leaves the class open.")
+        return result("unclassified", f"{sentence(signs.words)}; {said} leaves the class open.")
     if is_reduced:
-        return result("hfref", f"{_capital(signs.words)}; {said}, at most {show(limits.reduced_at_most_percent)} %.")
+        return result("hfref", f"{sentence(signs.words)}; {said}, at most {show(limits.reduced_at_most_percent)} %.")
     earlier = [
         m
         for m in lvefs
@@ -115,20 +115,30 @@ def determine_phenotype(
     if earlier:
         lowest = min(earlier, key=lambda m: (m.value, m.source))
         before = reading_of(lowest)
+        same_day = [m.value for m in lvefs if m.taken.latest == lowest.taken.latest]
+        disputed = _lie_across_a_limit(same_day, tables)
         rise = measurement.value - lowest.value
         flag = ("ud21-improved",) if is_exact and rise >= limits.improved_rise_points else ()
         return result(
             "hfimpef",
-            f"{_capital(signs.words)}; {said}, up from {say_value(before, tables)}.",
-            flag,
+            f"{sentence(signs.words)}; {said}, up from {say_value(before, tables)}"
+            + (f" (another value of that day is {show(max(same_day))} %: to be reviewed)." if disputed else "."),
+            (*flag, *(("two-values-one-day",) if disputed else ())),
             (before.evidence("supports"),),
         )
     is_preserved = _classify(measurement.value, is_exact, reading, ">=", limits.preserved_from_percent)
     if is_preserved is None:
-        return result("unclassified", f"{_capital(signs.words)}; {said} leaves the class open.")
+        return result("unclassified", f"{sentence(signs.words)}; {said} leaves the class open.")
     kind: PhenotypeKind = "hfpef" if is_preserved else "hfmref"
     never = f"none at or below {show(limits.reduced_at_most_percent)} % before"
-    return result(kind, f"{_capital(signs.words)}; {said}, {never}.")
+    return result(kind, f"{sentence(signs.words)}; {said}, {never}.")
+
+
+def _lie_across_a_limit(values: list[float], tables: ClinicalTables) -> bool:
+    """True if values of one day put the patient into different classes."""
+    limits = tables.phenotype
+    classes = {(v <= limits.reduced_at_most_percent, v >= limits.preserved_from_percent) for v in values}
+    return len(classes) > 1
 
 
 def _classify(value: float, is_exact: bool, reading: Reading, sign: str, threshold: float) -> bool | None:
@@ -136,10 +146,6 @@ def _classify(value: float, is_exact: bool, reading: Reading, sign: str, thresho
     if is_exact:
         return {"<=": value <= threshold, "<": value < threshold, ">=": value >= threshold}[sign]
     return reading.holds(sign, threshold, "%")  # type: ignore[arg-type]  # the three signs used here are Signs
-
-
-def _capital(words: str) -> str:
-    return words[:1].upper() + words[1:]
 
 
 @dataclass(frozen=True, slots=True)
@@ -212,7 +218,7 @@ def _without_lvef(record: PatientRecord, signs: Signs, flags: tuple[str, ...], t
     if special is not None:
         return Phenotype(kind=special, because=f"{NAMES[special].capitalize()}.", flags=flags, evidence=signs.evidence)
     if signs:
-        why = f"{_capital(signs.words)}; no ejection fraction is recorded."
+        why = f"{sentence(signs.words)}; no ejection fraction is recorded."
         return Phenotype(kind="unclassified", because=why, flags=flags, evidence=signs.evidence)
     structural = _stage_b_evidence(record, tables)
     if structural:

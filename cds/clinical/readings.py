@@ -155,6 +155,11 @@ def days_old(taken: PartialDate, today: date) -> int:
     return (today - taken.earliest).days
 
 
+def sentence(words: str) -> str:
+    """The words with a capital at their beginning, but for names that are written small ("eGFR")."""
+    return words if words.startswith("eGFR") else words[:1].upper() + words[1:]
+
+
 def show_limit(analyte: str, value: float, unit: str) -> str:
     """A limit as its analyte is shown: "5.0" for a potassium of 5."""
     return units.shown(analyte, value, unit)

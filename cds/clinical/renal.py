@@ -84,7 +84,9 @@ def _egfr_of_one_day(record: PatientRecord, measurements: Sequence[Measurement])
     reported = of_newest_day(m for m in measurements if m.analyte == "egfr")
     creatinines = of_newest_day(m for m in measurements if m.analyte == "creatinine")
     computed = [egfr for m in creatinines if (egfr := computed_egfr(record, m)) is not None]
-    return (*(reading_of(m) for m in reported), *computed)
+    current = [reading_of(m) for m in reported if m.method != "mdrd"]
+    older = [reading_of(m) for m in reported if m.method == "mdrd"]
+    return (*current, *computed, *older)
 
 
 def readings_of(record: PatientRecord, analyte: str) -> tuple[Reading, ...]:

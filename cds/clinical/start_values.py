@@ -101,7 +101,17 @@ def _hold_limit(situation: Situation, limit: Limit, readings: tuple[Reading, ...
         if holds and limit.sex is not None and sex not in ("male", "female"):
             holds = None
         if holds:
-            judgement.add(limit.effect, said, limit.id, [reading.evidence("limits")])
+            others = [
+                r for r in readings if r is not reading and unit in r.by_unit and not r.holds(limit.sign, value, unit)
+            ]
+            if others:
+                said += f" (another value of that day is not: {value_in_words(others[0], situation.tables)})"
+            if (limit.analyte, limit.effect) in judgement.held:
+                judgement.limits.append(limit.id)  # a stricter row has said it
+                return
+            judgement.held.add((limit.analyte, limit.effect))
+            facts = [reading.evidence("limits"), *(r.evidence("supports") for r in others)]
+            judgement.add(limit.effect, said, limit.id, facts)
             if limit.repeat_within_days is not None:
                 judgement.to_repeat[limit.analyte] = limit.repeat_within_days
             return

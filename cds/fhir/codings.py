@@ -71,10 +71,8 @@ def without_brackets(text: str) -> str:
 
 
 def plain_text(text: object) -> str:
-    """A sender's text for counting and display: no brand in brackets, no invisible characters; "" for what is no text."""
-    return (
-        without_brackets("".join(c for c in text[:_LONGEST_TEXT] if c.isprintable())) if isinstance(text, str) else ""
-    )
+    """A sender's text for counting and display, without invisible characters; "" for what is no text."""
+    return "".join(c for c in text[:_LONGEST_TEXT] if c.isprintable()).strip() if isinstance(text, str) else ""
 
 
 def words_of(text: str) -> list[str]:

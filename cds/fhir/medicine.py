@@ -255,7 +255,10 @@ def _with_strengths(match: DrugMatch, texts: Iterable[str]) -> tuple[tuple[DrugC
 def _say_how(medicine: Medicine, matches: Iterable[DrugMatch], place: Place) -> None:
     if medicine.matched_by == "text":
         place.context.intake.inform(
-            place.source, place.path, "is known by its text only", "Send a code of RxNorm, ATC or SNOMED CT"
+            place.source,
+            place.path,
+            "is known by its text only: no code sent is in our tables",
+            "Send a code of RxNorm, ATC or SNOMED CT that names the ingredient",
         )
     if any(c.drug_class is None and c.possible_classes for c in medicine.components) or any(
         "disagree" in (match.note or "") for match in matches
@@ -272,4 +275,4 @@ def _count(concept: Mapping[str, Any], text: str, place: Place) -> None:
 
 
 def _short(text: object) -> str:
-    return plain_text(text)[:_LONGEST_COUNTED_TEXT]
+    return without_brackets(plain_text(text))[:_LONGEST_COUNTED_TEXT]

@@ -10,6 +10,7 @@ from datetime import date, timedelta
 
 from cds.clinical.eligibility import Judgement, judge
 from cds.clinical.findings import Action, DrugProposal, Evidence, Finding, TestProposal
+from cds.clinical.harm import would_meet
 from cds.clinical.record import DrugCourse
 from cds.clinical.rules.answers import blocked, not_applicable
 from cds.clinical.rules.pillars import closes, course_evidence, nyha_or_surrogate
@@ -194,7 +195,8 @@ def _open(
     if absence.indication.action == "review":
         grade = situation.tables.recommendations[absence.indication.recommendation].grade
         weigh += f" The recommendation is a weak one (class {grade}), so this is a matter for review."
-    because = f"{_intro(situation, pillar, absence.wrong, absence.members)} {weigh}{_others(judgements, chosen)}"
+    meets = "".join(f" {said}" for said in would_meet(situation, chosen[0].drug, chosen[0].drug_class))
+    because = f"{_intro(situation, pillar, absence.wrong, absence.members)} {weigh}{meets}{_others(judgements, chosen)}"
     wrong = tuple(course_evidence(course, "limits") for course in absence.wrong)
     return Finding(
         rule=rule,

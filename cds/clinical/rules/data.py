@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from cds.clinical.findings import Due, Evidence, Finding, TestProposal
-from cds.clinical.readings import days_old, of_newest_day, reading_of, say_value, usable
+from cds.clinical.readings import days_old, of_newest_day, reading_of, say_value, sentence, usable
 from cds.clinical.record import DrugCourse
 from cds.clinical.rules.answers import met, not_applicable
 from cds.clinical.rules.monitoring import already_ordered
@@ -25,7 +25,7 @@ def ejection_fraction_missing(situation: Situation) -> tuple[Finding, ...]:
     if newest:
         reading = min((reading_of(m) for m in newest), key=lambda r: (r.by_unit["%"].low, r.source))  # as the phenotype
         if days_old(reading.taken, situation.today) <= fresh_days:
-            because = f"{_capital(say_value(reading, situation.tables))}."
+            because = f"{sentence(say_value(reading, situation.tables))}."
             return (met(EJECTION_FRACTION, because=because, evidence=(reading.evidence("supports"),)),)
         because = (
             f"The last ejection fraction is old: {say_value(reading, situation.tables)}, "
@@ -94,7 +94,3 @@ def _still_taken(course: DrugCourse) -> Finding:
         opened_by=course.sources[:1],
         topic=OLD_ORDERS,
     )
-
-
-def _capital(words: str) -> str:
-    return words[:1].upper() + words[1:]

@@ -16,7 +16,7 @@ from cds.clinical.rules.pillars import closes, course_evidence
 from cds.clinical.situation import Situation
 from cds.clinical.starting import dose_row, follow_up_tests
 from cds.clinical.tables import DoseRow
-from cds.clinical.treatment import Verdict, verdicts
+from cds.clinical.treatment import Verdict, fresh_readings, verdicts
 
 RAISE = "raise-dose"
 LOWER = "lower-dose"
@@ -264,7 +264,24 @@ def _lower(situation: Situation, course: DrugCourse) -> Finding:
             topic=f"drug:{course.drug}",
             why=f"above {show(above)} mg a day",
         )
+    missing = _without_recent(situation, course)
+    if missing:
+        because = f"Whether {course.drug} should be lowered cannot be told without a recent {' and '.join(missing)}."
+        wanted = tuple(f"a recent {name}" for name in missing)
+        return unknown(LOWER, about=course.drug, because=because, missing=wanted, evidence=evidence)
     return met(LOWER, about=course.drug, because=f"No recent value asks for less {course.drug}.", evidence=evidence)
+
+
+def _without_recent(situation: Situation, course: DrugCourse) -> list[str]:
+    """The values that limit the drug and are not known recently enough; eGFR stands for creatinine too."""
+    rows = situation.tables.safety.treatment_limits
+    asked = {row.analyte for row in rows if course.drug_class in row.drug_classes and row.effect != "no-raise"}
+    if situation.has_gate("dialysis"):
+        asked -= {"creatinine", "egfr"}
+    if "egfr" in asked:
+        asked.discard("creatinine")
+    names = situation.tables.analyte_names
+    return [names.get(analyte, analyte) for analyte in sorted(asked) if not fresh_readings(situation, analyte)]
 
 
 def _ask(situation: Situation, course: DrugCourse, asking: list[Verdict]) -> Finding:

@@ -5,7 +5,7 @@ from __future__ import annotations
 from datetime import timedelta
 
 from cds.clinical.findings import Evidence, Finding, TestProposal
-from cds.clinical.readings import Reading, days_old, reading_of, say_value, show, show_limit
+from cds.clinical.readings import Reading, days_old, reading_of, say_value, sentence, show, show_limit, value_in_words
 from cds.clinical.rules.answers import met, not_applicable, unknown
 from cds.clinical.safety_tables import OutOfRange
 from cds.clinical.situation import Situation, concepts_present
@@ -51,22 +51,26 @@ def _watched(situation: Situation, analyte: str) -> Finding:
             continue
         for reading in readings:
             if row.unit in reading.by_unit and reading.holds(row.sign, row.value, row.unit):
-                return _out(situation, row, reading)
-    because = f"{_capital(say_value(readings[0], situation.tables))}."
+                return _out(situation, row, reading, [r for r in readings if r is not reading])
+    because = f"{sentence(say_value(readings[0], situation.tables))}: within what is watched here."
     return met(RULE, about=analyte, because=because, evidence=(readings[0].evidence("supports"),))
 
 
-def _out(situation: Situation, row: OutOfRange, reading: Reading) -> Finding:
+def _out(situation: Situation, row: OutOfRange, reading: Reading, others: list[Reading]) -> Finding:
     unit = situation.tables.unit_names.get(row.unit, row.unit)
     limit = f"{_SIGNS[row.sign]} {show_limit(row.analyte, row.value, row.unit)} {unit}"
     bears_on = _bears_on(situation, row.analyte)
-    because = f"{_capital(say_value(reading, situation.tables))} is {limit}: {row.words}."
+    because = f"{sentence(say_value(reading, situation.tables))} is {limit}: {row.words}."
+    disagreeing = [r for r in others if not (row.unit in r.by_unit and r.holds(row.sign, row.value, row.unit))]
+    if disagreeing:
+        other = value_in_words(disagreeing[0], situation.tables)
+        because += f" Another value of that day is not ({other}): they disagree, so repeat it."
     if bears_on:
         because += f" It bears on {' and '.join(bears_on)}."
     name = situation.tables.analyte_names.get(row.analyte, row.analyte)
     repeats: tuple[TestProposal, ...] = ()
-    if row.repeat_within_days is not None:
-        due_by = situation.today + timedelta(days=row.repeat_within_days)
+    if row.repeat_within_days is not None or disagreeing:
+        due_by = situation.today + timedelta(days=row.repeat_within_days if row.repeat_within_days is not None else 7)
         test = _TEST_OF.get(row.analyte, row.analyte)
         repeats = (TestProposal(tests=(test,), not_before=None, due_by=due_by, why="to repeat"),)
     shown_unit = situation.tables.unit_names.get(reading.unit, reading.unit)
@@ -76,7 +80,7 @@ def _out(situation: Situation, row: OutOfRange, reading: Reading) -> Finding:
         outcome="open",
         action="test" if repeats else "review",
         because=because,
-        evidence=(reading.evidence("limits"),),
+        evidence=(reading.evidence("limits"), *(r.evidence("supports") for r in disagreeing)),
         limits=(row.id,),
         test_proposals=repeats,
         severity=row.severity,
@@ -104,7 +108,7 @@ def _haemolysed(situation: Situation) -> Finding | None:
         return None
     reading = reading_of(of_day[0])
     due_by = max(newest, situation.today)
-    because = f"{_capital(say_value(reading, situation.tables))} is from a haemolysed sample: change nothing on it, repeat it the same day."
+    because = f"{sentence(say_value(reading, situation.tables))} is from a haemolysed sample: change nothing on it, repeat it the same day."
     return Finding(
         rule=RULE,
         about="potassium",
@@ -132,7 +136,7 @@ def _creatinine(situation: Situation) -> Finding:
         )
     rise, course = max(rises, key=lambda pair: pair[0].percent)
     said = (
-        f"{_capital(say_value(rise.now, situation.tables))}, {_change(rise)} {rise.before.shown} on {rise.before.taken}, "
+        f"{sentence(say_value(rise.now, situation.tables))}, {_change(rise)} {rise.before.shown} on {rise.before.taken}, "
         f"before the last start or increase of {course.drug}"
     )
     evidence = (rise.now.evidence("limits"), rise.before.evidence("supports"))
@@ -176,7 +180,3 @@ def _creatinine(situation: Situation) -> Finding:
 
 def _change(rise: Rise) -> str:
     return f"{show(abs(rise.percent))} % {'above' if rise.percent >= 0 else 'below'}"
-
-
-def _capital(words: str) -> str:
-    return words[:1].upper() + words[1:]

@@ -74,6 +74,7 @@ def _harmful(situation: Situation, course: DrugCourse) -> Finding:
         limits=tuple(dict.fromkeys(reason.id for reason in reasons)),
         opened_by=course.sources[:1],
         severity=_softened(worst(reason.severity for reason in reasons), course),
+        asks_if_taken=course.stale,
         topic=topic,
         why=stops[0].short if stops and not check.reasons else _short(reasons[-len(check.reasons or reasons)].words),
     )
@@ -201,10 +202,21 @@ def _together(situation: Situation, pair: str, meetings: list[_Meeting]) -> Find
         opened_by=(*first.cause.sources[:1], *first.partner.sources[:1]),
         look_again_on=first.until.date() if first.until is not None else None,
         severity=_softened(first.severity, first.cause, first.partner),
-        topic=f"drug:{first.cause.drug}" if first.severity != "caution" else "combinations",
+        asks_if_taken=bool(stale),
+        topic=_topic(situation, first),
         test_proposals=_tests(situation, tests[0].row) if tests else (),
         why=_short(first.row.words),
     )
+
+
+def _topic(situation: Situation, meeting: _Meeting) -> str:
+    """The drug to act on; the partner where that must end anyway. Cautions share one card."""
+    if meeting.severity == "caution":
+        return "combinations"
+    for course in (meeting.cause, meeting.partner):
+        if check_harm(situation, course).must_stop:
+            return f"drug:{course.drug}"
+    return f"drug:{meeting.cause.drug}"
 
 
 def _ended(meeting: _Meeting) -> tuple[Evidence, ...]:

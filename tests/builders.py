@@ -332,7 +332,7 @@ def test_order(code: str, ordered: str, *, display: str = "", **more: Any) -> Re
         "id": f"order-{code}-{ordered}",
         "status": "active",
         "intent": "order",
-        "code": {"coding": [{"system": LOINC, "code": code, "display": display}]},
+        "code": {"coding": [{"system": LOINC, "code": code, **({"display": display} if display else {})}]},
         "subject": subject(),
         "authoredOn": ordered,
         **more,

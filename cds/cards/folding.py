@@ -23,6 +23,7 @@ _OFFERING = ("start", "switch", "raise", "lower")
 _SILENT_UNKNOWN = ("lab-out-of-range", "lower-dose")  # the timed checks and the start rules ask for what is missing
 _VALUES: tuple[tuple[str, ...], ...] = (("topic", "value:potassium"), ("topic", "value:kidney"))
 _CHECK, _NEEDED, _REPEAT = ("open", "check-potassium-creatinine"), ("needed", "tests"), ("blocked", "repeat")
+_OLD_ORDERS = ("topic", "old-orders")
 _SAME_SAMPLE = {"potassium", "creatinine"}  # one blood sample gives both
 
 
@@ -41,6 +42,9 @@ def make_cards(situation: Situation, findings: Sequence[Finding], wording: Wordi
         key = _group(finding)
         if key is not None:
             groups[key].append(finding)
+    for finding in groups.pop(_OLD_ORDERS, ()):  # a drug with a card of its own is asked about there
+        own = ("topic", f"drug:{finding.about}")
+        groups[own if own in groups else _OLD_ORDERS].append(finding)
     cards: list[Card] = []
     held_back: list[HeldBack] = []
     for group in _absorb(groups):

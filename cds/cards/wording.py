@@ -7,7 +7,7 @@ from dataclasses import dataclass, replace
 
 from cds.cards.card import LONGEST_HEADLINE, CardBasis, Family, Tier
 from cds.clinical.findings import Evidence, Finding
-from cds.clinical.readings import show
+from cds.clinical.readings import sentence, show
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -72,7 +72,7 @@ def headline(
             why=finding.why,
             dose=dose,
         )
-        text = text[0].upper() + text[1:]
+        text = sentence(text)
         if len(text) <= LONGEST_HEADLINE:
             return text
     return f"{text[: LONGEST_HEADLINE - 1].rsplit(' ', 1)[0].rstrip(' ,:')}…"

@@ -54,6 +54,7 @@ class DrugProposal:
     times_per_day: float | None
     dose_name: str | None = None
     dose_row: str | None = None  # key of the dose table
+    replaces: str | None = None  # the order it would replace
     note: str | None = None
 
 

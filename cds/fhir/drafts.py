@@ -54,6 +54,7 @@ def draft_drug_order(
         "medicationCodeableConcept": _concept(codes.drugs.get(proposal.drug), proposal.drug),
         "subject": {"reference": patient},
         "authoredOn": authored_on.isoformat(),
+        **_replaced(proposal.replaces),
         **_reasons(reasons),
         "note": [{"text": f"{_UNSIGNED} {proposal.note.capitalize()}." if proposal.note else _UNSIGNED}],
         "dosageInstruction": [_dosage(proposal)],
@@ -114,6 +115,12 @@ def _concept(code: OrderCode | None, text: str) -> dict[str, Any]:
     if code is None:
         return {"text": text}
     return {"coding": [{"system": code.system, "code": code.code, "display": code.display}], "text": text}
+
+
+def _replaced(source: str | None) -> dict[str, Any]:
+    if source is None or not source.startswith("MedicationRequest/"):
+        return {}
+    return {"priorPrescription": {"reference": source}}
 
 
 def _reasons(reasons: Iterable[str]) -> dict[str, Any]:

@@ -66,7 +66,7 @@ def test_assessing_a_thousand_resources_costs_at_most_two_and_a_half_times_parsi
 
 def test_help_costs_at_most_six_times_an_empty_python():
     def run(*arguments: str) -> Callable[[], object]:
-        return lambda: subprocess.run([sys.executable, *arguments], check=True, capture_output=True)  # noqa: S603
+        return lambda: subprocess.run([sys.executable, *arguments], check=True, capture_output=True)
 
     ratio = seconds(run("-m", "cds", "--help"), 7) / seconds(run("-c", "pass"), 7)
     print(f"\n--help / python -c pass: {ratio:.2f}")

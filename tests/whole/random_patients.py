@@ -182,7 +182,9 @@ def patients(draw: st.DrawFn) -> list[Resource]:
     born = draw(st.sampled_from(("1941-05-04", "1967-05-04", "1967", "1990-02-28", None)))
     sex = draw(st.sampled_from(("male", "female", None)))
     found = [patient(born=born, sex=sex)]
-    target = draw(st.sampled_from(("reduced", "reduced", "reduced", "mildly reduced", "preserved", "unmeasured", "none")))
+    target = draw(
+        st.sampled_from(("reduced", "reduced", "reduced", "mildly reduced", "preserved", "unmeasured", "none"))
+    )
     if target != "none":
         found.append(problem("heart failure", draw(when(st.sampled_from((91, 181, 400, 900))))))
     limits = {"reduced": (25, 35, 40), "mildly reduced": (41, 45, 49), "preserved": (50, 60)}

@@ -284,9 +284,9 @@ def _in_place_of(drug: str, course: DrugCourse) -> DrugProposal:
     """The same total daily dose for another salt of the same drug, once a day; for another drug the prescriber chooses."""
     if _same_ingredient(drug, course) and course.daily_dose_mg is not None:
         note = f"same total daily dose as {course.drug}, which ends"
-        return DrugProposal(drug=drug, dose_mg=course.daily_dose_mg, times_per_day=1, note=note)
+        return DrugProposal(drug=drug, dose_mg=course.daily_dose_mg, times_per_day=1, replaces=course.source, note=note)
     note = f"in place of {course.drug}, which ends; no equivalent dose in the tables: the prescriber chooses"
-    return DrugProposal(drug=drug, dose_mg=None, times_per_day=None, note=note)
+    return DrugProposal(drug=drug, dose_mg=None, times_per_day=None, replaces=course.source, note=note)
 
 
 def _unique(evidence: tuple[Evidence, ...]) -> tuple[Evidence, ...]:

@@ -13,6 +13,7 @@ from cds.clinical.rules.pillars import course_evidence, nyha_or_surrogate
 from cds.clinical.safety_tables import SwitchStart
 from cds.clinical.situation import Situation, concepts_present
 from cds.clinical.starting import follow_up_tests
+from cds.clinical.treatment import verdicts
 
 RULE = "switch-to-arni"
 _DRUG, _CLASS = "sacubitril/valsartan", "arni"
@@ -75,6 +76,10 @@ def _switch(situation: Situation) -> Finding:
         return unknown(RULE, about=_CLASS, because=because, missing=("NYHA class",), evidence=evidence)
     if symptoms is False:
         return not_applicable(RULE, about=_CLASS, because="The recommendation is for NYHA class II and III.")
+    unsettled = [v for c in replaced for v in verdicts(situation, c) if v.row.effect in ("stop", "lower", "review")]
+    if unsettled:
+        because = f"Not now: {unsettled[0].words}. That comes first."
+        return blocked(RULE, about=_CLASS, because=because, evidence=(*evidence, *unsettled[0].evidence))
     judgement = judge(situation, _DRUG, _CLASS, leaving_out=_OWN_PREDECESSOR)
     intro = f"{replaced[0].drug.capitalize()} is running in {situation.phenotype.name}; an ARNI does better."
     facts = (*evidence, *situation.phenotype.evidence, *judgement.evidence)
@@ -164,6 +169,7 @@ def start_dose(situation: Situation, replaced: list[DrugCourse]) -> DrugProposal
         times_per_day=row.start_times_per_day,
         dose_name=row.names.get(f"{row.start_dose_mg:g}"),
         dose_row=row.id,
+        replaces=replaced[0].source,
         note=note,
     )
 

@@ -211,6 +211,7 @@ def _proposal(course: DrugCourse, row: DoseRow, dose_mg: float, times: float, no
         times_per_day=times,
         dose_name=row.names.get(f"{dose_mg:g}"),
         dose_row=row.id,
+        replaces=course.source,
         note=note,
     )
 

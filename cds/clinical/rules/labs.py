@@ -84,6 +84,7 @@ def _out(situation: Situation, row: OutOfRange, reading: Reading, others: list[R
         limits=(row.id,),
         test_proposals=repeats,
         severity=row.severity,
+        cautions=(row.id,),
         topic=f"value:{'kidney' if row.analyte == 'egfr' else row.analyte}",
         why=f"{name} {reading.shown} {shown_unit}".strip(),
     )

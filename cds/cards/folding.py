@@ -191,6 +191,8 @@ def _cautions(situation: Situation, findings: list[Finding], is_from_memory: boo
     keys = [key for finding in findings for key in finding.cautions]
     if any(finding.drug_proposals or finding.test_proposals for finding in findings):
         keys.append("draft")
+    if any(proposal.alternatives for finding in findings for proposal in finding.drug_proposals):
+        keys.append("alternatives")
     cited = {fact.resource for finding in findings for fact in finding.evidence}
     if any(course.matched_by == "text" and not cited.isdisjoint(course.sources) for course in situation.courses):
         keys.append("unsure-code")

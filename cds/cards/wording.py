@@ -117,6 +117,12 @@ def named_evidence(evidence: Iterable[Evidence], wording: Wording) -> tuple[Evid
     return tuple(dict.fromkeys(named))
 
 
+def _named(what: str, wording: Wording) -> str:
+    """The analyte's name, also before a remark: "egfr (computed)" becomes "eGFR (computed)"."""
+    slug, space, remark = what.partition(" (")
+    return f"{wording.analytes[slug]}{space}{remark}" if slug in wording.analytes else what
+
+
 def bases(findings: Iterable[Finding], wording: Wording) -> tuple[CardBasis, ...]:
     """The recommendations first, then the limits and schedule rows that decided, each once."""
     found = list(findings)

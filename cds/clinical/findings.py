@@ -55,6 +55,7 @@ class DrugProposal:
     dose_name: str | None = None
     dose_row: str | None = None  # key of the dose table
     replaces: str | None = None  # the order it would replace
+    alternatives: tuple[str, ...] = ()  # other drugs proposed on the same card: only one is to be signed
     note: str | None = None
 
 

@@ -56,7 +56,7 @@ def draft_drug_order(
         "authoredOn": authored_on.isoformat(),
         **_replaced(proposal.replaces),
         **_reasons(reasons),
-        "note": [{"text": f"{_UNSIGNED} {proposal.note.capitalize()}." if proposal.note else _UNSIGNED}],
+        "note": [{"text": _note(proposal)}],
         "dosageInstruction": [_dosage(proposal)],
     }
     return _checked(draft)
@@ -115,6 +115,13 @@ def _concept(code: OrderCode | None, text: str) -> dict[str, Any]:
     if code is None:
         return {"text": text}
     return {"coding": [{"system": code.system, "code": code.code, "display": code.display}], "text": text}
+
+
+def _note(proposal: DrugProposal) -> str:
+    note = _UNSIGNED
+    if proposal.alternatives:
+        note += f" Sign only one of the alternatives; the others are {' and '.join(proposal.alternatives)}."
+    return f"{note} {proposal.note[0].upper()}{proposal.note[1:]}." if proposal.note else note
 
 
 def _replaced(source: str | None) -> dict[str, Any]:

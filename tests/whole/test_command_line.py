@@ -52,13 +52,9 @@ def test_the_module_runs_as_the_command_and_reads_standard_input():
 
 def test_two_processes_with_different_hash_seeds_print_the_same_bytes():
     file = str(FIXTURES / "messy-export" / "bundle.json")
-    runs = [
-        python("-m", "cds", name, file, "--as-of", "2026-03-01", PYTHONHASHSEED=seed).stdout
-        for name in ("assess", "record")
-        for seed in ("1", "2")
-    ]
-    assert runs[0] == runs[1]
-    assert runs[2] == runs[3]
+    words = ("-m", "cds", "assess", file, "--as-of", "2026-03-01", "--trace")
+    first, second = (python(*words, PYTHONHASHSEED=seed) for seed in ("1", "2"))
+    assert first.stdout == second.stdout != b""
 
 
 @pytest.mark.parametrize("words", [["--help"], ["-h"], ["assess", "--help"], ["record", "--help"]])

@@ -124,7 +124,7 @@ def chart() -> list[Resource]:
         implanted,
         device,
         stay,
-        test_order("2823-3", "2026-02-25", **NOTED),
+        test_order("2823-3", "2026-02-25", display=f"{TEXT} test", **NOTED),
     ]
 
 
@@ -180,7 +180,9 @@ def messages(data: bytes) -> str:
 def assert_discreet(data: bytes, where: object) -> None:
     said = messages(data)
     for secret in SECRETS:
-        assert secret not in said, f"{where}: a message holds {secret!r}: …{said[max(0, said.find(secret) - 200) :][:400]}…"
+        assert secret not in said, (
+            f"{where}: a message holds {secret!r}: …{said[max(0, said.find(secret) - 200) :][:400]}…"
+        )
 
 
 CHART = chart()
@@ -250,7 +252,9 @@ def test_values_that_are_not_believed_are_not_repeated():
         for value in (666.0666, NUMBER, -NUMBER, 0, 6.660666e30):
             changed = replaced(CHART[1], ("valueQuantity",), {"value": value, "unit": unit, "code": unit})
             assert_discreet(bundle(CHART[0], changed), (value, unit))
-        text = {key: value for key, value in CHART[1].items() if key != "valueQuantity"} | {"valueString": f"6.66 {unit}"}
+        text = {key: value for key, value in CHART[1].items() if key != "valueQuantity"} | {
+            "valueString": f"6.66 {unit}"
+        }
         assert_discreet(bundle(CHART[0], text), text["valueString"])
 
 

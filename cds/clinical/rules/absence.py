@@ -5,7 +5,7 @@ The candidates, their order and every limit are rows of the tables.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from datetime import date, timedelta
 
 from cds.clinical.eligibility import Judgement, judge
@@ -269,6 +269,15 @@ def _proposals(
 ) -> tuple[DrugProposal, ...]:
     if action not in ("start", "switch"):
         return ()
+    drugs = [j.drug for j in chosen]
+    return tuple(
+        replace(proposal, alternatives=tuple(drug for drug in drugs if drug != proposal.drug))
+        for proposal in _doses(situation, chosen, wrong)
+    )
+
+
+def _doses(situation: Situation, chosen: list[Judgement], wrong: list[DrugCourse]) -> tuple[DrugProposal, ...]:
+    """Each chosen drug with its dose, the preferred first."""
     if not wrong:
         return tuple(start_proposal(situation, j.drug) for j in chosen)
     return tuple(

@@ -109,9 +109,7 @@ def wanted_names(finding: Finding, wording: Wording) -> tuple[str, ...]:
 def named_evidence(evidence: Iterable[Evidence], wording: Wording) -> tuple[Evidence, ...]:
     """Each fact once, with analytes under their names and units as people write them."""
     named = (
-        replace(
-            fact, what=wording.analytes.get(fact.what, fact.what), unit=wording.units.get(fact.unit or "", fact.unit)
-        )
+        replace(fact, what=_named(fact.what, wording), unit=wording.units.get(fact.unit or "", fact.unit))
         for fact in evidence
     )
     return tuple(dict.fromkeys(named))

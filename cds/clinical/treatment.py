@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
-from datetime import date, timedelta
 
 from cds.clinical import units
 from cds.clinical.findings import Evidence
@@ -65,8 +64,7 @@ def creatinine_rise(situation: Situation, course: DrugCourse) -> Rise | None:
     limits = situation.tables.safety.limits
     measured = [m for m in usable(situation.record, "creatinine") if m.comparator is None and m.taken.is_day]
     after = [m for m in measured if m.taken.latest > begun.latest]
-    since = begun.latest - timedelta(days=limits.baseline_within_days)
-    before = [m for m in measured if since <= m.taken.latest <= begun.latest]
+    before = [m for m in measured if 0 <= (begun.latest - m.taken.latest).days <= limits.baseline_within_days]
     if not after or not before or days_old(after[0].taken, situation.today) > limits.value_counts_days:
         return None
     now, base = after[0], before[0]
@@ -106,9 +104,8 @@ def _value_verdict(situation: Situation, row: TreatmentLimit) -> Verdict | None:
 
 def _held_before(situation: Situation, row: TreatmentLimit, newest: Reading) -> Reading | None:
     """An earlier day's reading, recent enough, for which the limit held as well."""
-    since: date = newest.taken.latest - timedelta(days=row.again_within_days or 0)
     for measurement in usable(situation.record, row.analyte):
-        if since <= measurement.taken.latest < newest.taken.latest:
+        if 0 < (newest.taken.latest - measurement.taken.latest).days <= (row.again_within_days or 0):
             reading = reading_of(measurement)
             if row.unit in reading.by_unit and reading.holds(row.sign, row.value, row.unit):
                 return reading

@@ -20,6 +20,7 @@ _WITHOUT_SECONDS = re.compile(r"[0-9]{4}-[0-9]{2}-[0-9]{2}T[0-9]{2}:[0-9]{2}(?:Z
 _WITHOUT_ZONE = re.compile(r"[0-9]{4}-[0-9]{2}-[0-9]{2}T[0-9]{2}:[0-9]{2}:[0-9]{2}(?:\.[0-9]+)?")
 _LONGEST_TEXT = 64  # nobody writes a longer date; keeps a hostile one from costing time
 _LARGEST_OFFSET = timedelta(hours=14)
+_YEARS_TO_ASSESS = range(1900, 2200)  # days are counted back and ahead from the moment, and no calendar must end there
 
 
 class DateNotUnderstood(ValueError):  # noqa: N818 - says what happened, as a reader would
@@ -69,9 +70,11 @@ def parse_period(period: object, zone: tzinfo) -> tuple[PartialDate | None, Part
 def parse_as_of(text: str, zone: tzinfo) -> datetime:
     """Read the moment of an assessment, in `zone`: an instant as it is, a date as the last microsecond of that day.
 
-    Raises `DateNotUnderstood`, also for a month or a year.
+    Raises `DateNotUnderstood`, also for a month or a year, and outside the years 1900 to 2199.
     """
     when = parse_date(text, zone)
+    if when.earliest.year not in _YEARS_TO_ASSESS:
+        raise DateNotUnderstood("is outside the years 1900 to 2199")
     if when.at is not None:
         return when.at
     if not when.is_day:

@@ -340,3 +340,8 @@ def test_order(code: str, ordered: str, *, display: str = "", **more: Any) -> Re
 
 
 test_order.__test__ = False  # type: ignore[attr-defined]  # a builder, not a test
+
+
+def named(drug: str, dose_mg: float | None = None, times_per_day: float = 1, **more: Any) -> Resource:
+    """An order that says the drug by its name only, without a code; since March 2025 unless told otherwise."""
+    return order(drug, dose_mg, times_per_day, **{"since": "2025-03-01", "concept": {"text": drug}, **more})

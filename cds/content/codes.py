@@ -46,7 +46,7 @@ ANALYTE_USES = frozenset(
 # Reactions no problem code of ours stands for.
 _REACTION_WORDS = (
     "anaphylaxis bronchospasm cough diarrhoea dizziness erectile-dysfunction fatigue "
-    "gastrointestinal-bleeding gynaecomastia headache nausea pruritus rash renal-failure syncope urticaria"
+    "gastrointestinal-bleeding gynaecomastia headache maximal-tolerated-dose nausea pruritus rash renal-failure syncope urticaria"
 )
 WORD_ONLY_REACTIONS = frozenset(_REACTION_WORDS.split())
 _NO_SUBJECT = "none"  # beside a class: the code may also mean a drug that is no subject of ours

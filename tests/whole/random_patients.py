@@ -7,6 +7,7 @@ drugs) and is then disturbed: values beside the limits, dates beside the windows
 from __future__ import annotations
 
 import json
+import re
 from collections.abc import Mapping
 from datetime import UTC, date, datetime, time, timedelta
 from functools import cache
@@ -80,9 +81,11 @@ def day(ago: int) -> str:
 
 
 def numbered(resources: list[Resource], start: int = 1) -> list[Resource]:
-    """The resources, each with an id of its own (Patients keep theirs)."""
+    """The resources, each with a legal id of its own (Patients keep theirs)."""
     return [
-        resource if resource["resourceType"] == "Patient" else {**resource, "id": f"{resource['id']}-{number}"[-64:]}
+        resource
+        if resource["resourceType"] == "Patient"
+        else {**resource, "id": re.sub("[^A-Za-z0-9.-]", "", f"{resource['id']}-{number}")[-64:]}
         for number, resource in enumerate(resources, start=start)
     ]
 
@@ -190,14 +193,18 @@ def patients(draw: st.DrawFn) -> list[Resource]:
     limits = {"reduced": (25, 35, 40), "mildly reduced": (41, 45, 49), "preserved": (50, 60)}
     if target in limits:
         found.append(lvef(draw(st.sampled_from(limits[target])), day(draw(st.sampled_from((31, 181, 366))))))
-    if draw(st.booleans()):  # a clinic visit with all that a start asks for
-        seen = day(draw(st.sampled_from((0, 3, 7, 8, 14, 30, 31))))
-        found += [pressure(118, 70, seen), heart_rate(68, seen), nyha(draw(st.integers(1, 3)), seen)]
-        found.append(potassium(draw(st.sampled_from(POTASSIUMS)), seen))
-        found.append(creatinine(draw(st.sampled_from(CREATININES)), seen))
-    found += draw(st.lists(orders(), max_size=6))
-    found += draw(st.lists(measurements(), max_size=8))
-    found += draw(st.lists(problems(), max_size=3))
+    if draw(st.sampled_from((True, True, True, False))):  # a clinic visit with all that a start asks for
+        seen = day(draw(st.sampled_from((0, 1, 3, 6, 7, 8, 14, 30, 31))))
+        found += [pressure(118, 70, seen), heart_rate(68, seen), nyha(draw(st.sampled_from((2, 2, 3, 1))), seen)]
+        found.append(potassium(draw(st.sampled_from((4.2, 4.4, 4.6, 4.9, 4.9, *POTASSIUMS))), seen))
+        found.append(creatinine(draw(st.sampled_from((0.8, 0.9, 1.0, 1.1, 1.2, *CREATININES))), seen))
+        found.append(sodium(139, seen))
+    begun = draw(st.sampled_from((None, None, "spironolactone", "enalapril", "sacubitril/valsartan")))
+    if begun is not None:  # a drug whose checks have windows
+        found.append(order(begun, *draw(st.sampled_from(DOSES[begun])), since=day(draw(ago))))
+    found += draw(st.lists(orders(), max_size=draw(st.sampled_from((2, 6)))))
+    found += draw(st.lists(measurements(), max_size=draw(st.sampled_from((0, 2, 8)))))
+    found += draw(st.lists(problems(), max_size=draw(st.sampled_from((0, 1, 3)))))
     return numbered(found)
 
 

@@ -66,9 +66,14 @@ def _raise(situation: Situation, course: DrugCourse) -> Finding:
         return met(RAISE, about=about, because=f"{name} is at target: {share}.", evidence=evidence)
     reason = _not_now(situation, course, row)
     if reason is not None:
-        words, again, facts = reason
+        words, again, against = reason
         return blocked(
-            RAISE, about=about, because=f"{name}: {share}. {words}", evidence=(*evidence, *facts), look_again_on=again
+            RAISE,
+            about=about,
+            because=f"{name}: {share}. {words}",
+            evidence=(*evidence, *(fact for v in against for fact in v.evidence)),
+            limits=tuple(dict.fromkeys(v.row.id for v in against)),
+            look_again_on=again,
         )
     if course.stale:
         because = f"{name}: {share}. The order is old: whether it is still taken must be confirmed before it is raised."
@@ -152,15 +157,15 @@ def _stronger(situation: Situation, course: DrugCourse) -> str | None:
 
 def _not_now(
     situation: Situation, course: DrugCourse, row: DoseRow
-) -> tuple[str, date | None, tuple[Evidence, ...]] | None:
-    """A recorded reason against a raise today: tolerance, today's values, or too early."""
+) -> tuple[str, date | None, tuple[Verdict, ...]] | None:
+    """A recorded reason against a raise today: tolerance, today's values (with their limits), or too early."""
     tolerated = _tolerance(situation, course)
     if tolerated is not None:
         return tolerated, None, ()
     limiting = [v for v in verdicts(situation, course) if v.row.effect in ("no-raise", "review")]
     if limiting:
         words = "; ".join(dict.fromkeys(v.words for v in limiting))
-        return f"Not today: {words}.", None, tuple(fact for v in limiting for fact in v.evidence)
+        return f"Not today: {words}.", None, tuple(limiting)
     if course.changed is not None:
         ready = course.changed.latest + timedelta(days=row.min_interval_days)
         if situation.today < ready:

@@ -2,12 +2,14 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable, Iterable
 from datetime import UTC, datetime, time, tzinfo
 from typing import Any
 
 from cds.cards.card import Card, HeldBack
 from cds.cards.folding import make_cards
 from cds.cards.ordering import held_back_order
+from cds.cards.replies import Reply, hold_back
 from cds.cards.shape import card_shape, finding_shape, gate_shape, held_back_shape, phenotype_shape
 from cds.clinical.evaluate import findings_in
 from cds.clinical.order_check import check_orders as check_drafts
@@ -21,6 +23,12 @@ from cds.fhir.reading import COMMAND_LINE_LIMITS, Limits, read_json
 from cds.fhir.record_shape import course_issues, issue_shape, record_shape
 
 FORMAT_VERSION = "1.0"
+RepliesOf = Callable[[str], Iterable[Reply]]
+
+
+def no_replies(_patient: str) -> Iterable[Reply]:
+    """Without a store nobody has answered anything."""
+    return ()
 
 
 def assess(
@@ -30,11 +38,12 @@ def assess(
     as_of: datetime,
     trace: bool = False,
     limits: Limits = COMMAND_LINE_LIMITS,
+    replies: RepliesOf = no_replies,
 ) -> dict[str, Any]:
     """Assess every patient of a Bundle (or of a single resource) and return the assessment as plain data.
 
     Calendar days are days in the zone of `as_of`. With `trace` every finding is listed. Equal input, content and `as_of`
-    give equal output. Raises InputError (and its kinds) for input that cannot be read as a whole; everything else that
+    give equal output, if `replies` (what was answered to a patient's cards, by patient reference) are equal too. Raises InputError (and its kinds) for input that cannot be read as a whole; everything else that
     is wrong with the input is an issue in the answer. Without a Patient there are no assessments, only issues.
     """
     split = split_by_patient(read_json(data, limits), limits)
@@ -43,7 +52,9 @@ def assess(
         "format": "gdmt-cards/assessment",
         **_frame(content, as_of),
         "assessments": [
-            assess_patient(one, content, as_of=as_of, trace=trace) for one in built if one.record is not None
+            assess_patient(one, content, as_of=as_of, trace=trace, replies=replies(one.patient))
+            for one in built
+            if one.record is not None
         ],
         "issues": _unowned(split, built),
     }
@@ -64,7 +75,12 @@ def describe_records(
 
 
 def check_orders(
-    data: bytes, content: Content, *, as_of: datetime, limits: Limits = COMMAND_LINE_LIMITS
+    data: bytes,
+    content: Content,
+    *,
+    as_of: datetime,
+    limits: Limits = COMMAND_LINE_LIMITS,
+    replies: RepliesOf = no_replies,
 ) -> dict[str, Any]:
     """Check the orders under the pen: the MedicationRequests of the input with status "draft". Raises as `assess` does.
 
@@ -75,12 +91,18 @@ def check_orders(
     return {
         "format": "gdmt-cards/order-check",
         **_frame(content, as_of),
-        "checks": [_order_check(patient, one, content, as_of) for patient, one in built if one.record is not None],
+        "checks": [
+            _order_check(patient, one, content, as_of, replies(one.patient))
+            for patient, one in built
+            if one.record is not None
+        ],
         "issues": _unowned(split, [one for _, one in built]),
     }
 
 
-def _order_check(patient: PatientResources, built: BuiltRecord, content: Content, as_of: datetime) -> dict[str, Any]:
+def _order_check(
+    patient: PatientResources, built: BuiltRecord, content: Content, as_of: datetime, replies: Iterable[Reply]
+) -> dict[str, Any]:
     if built.record is None:
         raise ValueError("a refused patient has no orders to check")
     drafts = frozenset(
@@ -88,35 +110,39 @@ def _order_check(patient: PatientResources, built: BuiltRecord, content: Content
         for resource in patient.resources.get("MedicationRequest", ())
         if resource.get("status") == "draft"
     )
-    check = check_drafts(built.record, drafts, content.tables, as_of=as_of)
-    orders = []
+    check = check_drafts(built.record, drafts, content.tables, as_of=as_of, rules_off=content.rules_off)
+    answers = tuple(replies)
+    orders: list[dict[str, Any]] = []
+    held_back: list[HeldBack] = []
     said: set[tuple[str, str | None]] = set()
     for order in check.orders:
         made = make_cards(check.after, order.findings, content.wording)
+        shown, answered = hold_back(made.cards, answers, content.reply_limits, today=as_of.date())
+        held_back.extend((*made.held_back, *answered))
         said |= {(finding.rule, finding.about) for finding in order.findings}
         orders.append(
             {
                 "order": order.source,
                 "drugs": list(order.drugs),
-                "verdict": "cards" if made.cards else "closes" if order.closes else "clear",
+                "verdict": "cards" if shown else "closes" if order.closes else "clear",
                 "closes": list(order.closes),
-                "cards": [_card_shape(card, check.after, content) for card in made.cards],
+                "cards": [_card_shape(card, check.after, content) for card in shown],
             }
         )
     rest = make_cards(check.after, [f for f in check.others if (f.rule, f.about) not in said], content.wording)
-    held_back = [
-        *rest.held_back,
-        *(
-            HeldBack(card_id=card.card_id, rule=card.rule, about=card.about, reason="not-about-this-order")
-            for card in rest.cards
-            if card.tier != "danger"
-        ),
-    ]
+    dangers = [card for card in rest.cards if card.tier == "danger"]
+    shown, answered = hold_back(dangers, answers, content.reply_limits, today=as_of.date())
+    held_back.extend((*rest.held_back, *answered))
+    held_back.extend(
+        HeldBack(card_id=card.card_id, rule=card.rule, about=card.about, reason="not-about-this-order")
+        for card in rest.cards
+        if card.tier != "danger"
+    )
     issues = [*built.issues, *course_issues(check.after.courses)]
     return {
         "patient": built.patient,
         "orders": orders,
-        "cards": [_card_shape(card, check.after, content) for card in rest.cards if card.tier == "danger"],
+        "cards": [_card_shape(card, check.after, content) for card in shown],
         "held_back": [held_back_shape(item) for item in sorted(held_back, key=held_back_order)],
         "intake": {
             "read": built.read,
@@ -130,20 +156,28 @@ def _card_shape(card: Card, situation: Situation, content: Content) -> dict[str,
     return card_shape(card, _drafts(card, situation, content), content.wording)
 
 
-def assess_patient(built: BuiltRecord, content: Content, *, as_of: datetime, trace: bool = False) -> dict[str, Any]:
+def assess_patient(
+    built: BuiltRecord,
+    content: Content,
+    *,
+    as_of: datetime,
+    trace: bool = False,
+    replies: Iterable[Reply] = (),
+) -> dict[str, Any]:
     """Assess one patient whose record was built. The record must not be refused."""
     if built.record is None:
         raise ValueError("a refused patient has no record to assess")
     situation = understand(built.record, content.tables, as_of=as_of)
-    findings = findings_in(situation)
+    findings = findings_in(situation, rules_off=content.rules_off)
     made = make_cards(situation, findings, content.wording)
+    shown, answered = hold_back(made.cards, replies, content.reply_limits, today=situation.today)
     issues = [*built.issues, *course_issues(situation.courses)]
     return {
         "patient": built.patient,
         "phenotype": phenotype_shape(situation.phenotype),
         "gates": [gate_shape(gate) for gate in situation.gates],
-        "cards": [_card_shape(card, situation, content) for card in made.cards],
-        "held_back": [held_back_shape(item) for item in made.held_back],
+        "cards": [_card_shape(card, situation, content) for card in shown],
+        "held_back": [held_back_shape(item) for item in sorted((*made.held_back, *answered), key=held_back_order)],
         **({"findings": [finding_shape(finding) for finding in findings]} if trace else {}),
         "intake": {
             "read": built.read,
@@ -160,8 +194,9 @@ def _frame(content: Content, as_of: datetime) -> dict[str, Any]:
         "content": {
             "version": content.version,
             "sha256": content.sha256,
-            "site": None,
-            "signed_off": None,
+            "site": content.site,
+            "signed_off": content.signed_off,
+            "rules_off": sorted(content.rules_off),
             "notice": content.wording.notice,
         },
     }
@@ -174,7 +209,7 @@ def shown_moment(as_of: datetime) -> str:
 
 def _built(patient: PatientResources, content: Content, as_of: datetime) -> BuiltRecord:
     zone: tzinfo = as_of.tzinfo if as_of.tzinfo is not None else UTC
-    return build_record(patient, content.codes, zone)
+    return build_record(patient, content.codes, zone, default_units=content.default_units)
 
 
 def _record(built: BuiltRecord, content: Content, as_of: datetime) -> dict[str, Any]:

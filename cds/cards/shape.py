@@ -6,6 +6,7 @@ from collections.abc import Mapping, Sequence
 from typing import Any
 
 from cds.cards.card import Card, CardBasis, HeldBack
+from cds.cards.replies import facts_of
 from cds.cards.wording import Wording
 from cds.clinical.findings import Due, Evidence, Finding
 from cds.clinical.phenotype import Phenotype
@@ -30,6 +31,7 @@ def card_shape(card: Card, drafts: Sequence[Mapping[str, Any]], wording: Wording
         "drafts": list(drafts),
         "cautions": list(card.cautions),
         "replies": _replies(wording),
+        "facts": facts_of(card),
         "expires_on": card.expires_on.isoformat(),
     }
 

@@ -55,11 +55,15 @@ ANSWERS: Mapping[str, tuple[str, ...]] = {
 }
 
 
-def findings_in(situation: Situation) -> tuple[Finding, ...]:
-    """Every rule's answers, in the order of `RULES`, then by subject. One answer per rule and subject."""
+def findings_in(situation: Situation, *, rules_off: frozenset[str] = frozenset()) -> tuple[Finding, ...]:
+    """Every rule's answers, in the order of `RULES`, then by subject. One answer per rule and subject.
+
+    A rule a site has switched off answers nothing; it is named with the content.
+    """
     found: list[Finding] = []
     for rule in RULES:
-        found.extend(sorted(rule(situation), key=lambda finding: finding.about or ""))
+        answers = sorted(rule(situation), key=lambda finding: finding.about or "")
+        found.extend(finding for finding in answers if finding.rule not in rules_off)
     return tuple(found)
 
 

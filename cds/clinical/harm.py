@@ -13,7 +13,7 @@ from cds.clinical.eligibility import stopping_barriers
 from cds.clinical.findings import Evidence, Severity
 from cds.clinical.readings import Reading, value_in_words
 from cds.clinical.record import DrugCourse
-from cds.clinical.renal import EGFR_UNIT
+from cds.clinical.renal import EGFR_UNIT, age_in_years
 from cds.clinical.safety_tables import Harm
 from cds.clinical.situation import Situation, concepts_present
 
@@ -130,6 +130,10 @@ def _hold(situation: Situation, row: Harm, course: DrugCourse, present: frozense
     if row.daily_mg_above is not None:
         most = course.daily_dose_mg if course.daily_dose_mg is not None else course.max_daily_dose_mg
         if most is None or most <= row.daily_mg_above:
+            return
+    if row.age_above_years is not None:
+        age = age_in_years(situation.record, situation.today)
+        if age is None or age <= row.age_above_years:
             return
     if row.admission_within_days is not None and not _was_admitted(situation, row.admission_within_days):
         return

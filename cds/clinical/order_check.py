@@ -44,7 +44,12 @@ class OrderCheck:
 
 
 def check_orders(
-    record: PatientRecord, drafts: frozenset[str], tables: ClinicalTables, *, as_of: datetime
+    record: PatientRecord,
+    drafts: frozenset[str],
+    tables: ClinicalTables,
+    *,
+    as_of: datetime,
+    rules_off: frozenset[str] = frozenset(),
 ) -> OrderCheck:
     """Hold the record without the drafts against the one with them. `drafts` are "MedicationRequest/id".
 
@@ -65,10 +70,10 @@ def check_orders(
         as_of=as_of,
         first_doses={order.drug: order.first_dose for order in orders},
     )
-    open_before = {(f.rule, f.about): f for f in findings_in(before) if f.outcome == "open"}
-    found_after = findings_in(after)
+    open_before = {(f.rule, f.about): f for f in findings_in(before, rules_off=rules_off) if f.outcome == "open"}
+    found_after = findings_in(after, rules_off=rules_off)
     checked = [
-        _checked(source, [o for o in orders if o.source == source], before, after, open_before, found_after)
+        _checked(source, [o for o in orders if o.source == source], before, after, open_before, found_after, rules_off)
         for source in sorted(drafts)
     ]
     return OrderCheck(after=after, orders=tuple(checked), others=tuple(f for f in found_after if f.outcome == "open"))
@@ -98,13 +103,15 @@ def _checked(
     after: Situation,
     open_before: dict[tuple[str, str | None], Finding],
     found_after: Sequence[Finding],
+    rules_off: frozenset[str],
 ) -> CheckedOrder:
     found: list[Finding] = []
     closes: dict[str, None] = {}
     for order in orders:
         brought = [f for f in found_after if f.outcome == "open" and _is_about(f, order, after)]
         found.extend(f for f in brought if not _was_open(f, open_before))
-        found.extend(f for f in order_findings(before, after, order) if f.outcome == "open")
+        asked = order_findings(before, after, order)
+        found.extend(f for f in asked if f.outcome == "open" and f.rule not in rules_off)
         for finding in found_after:
             if finding.outcome == "met" and (finding.rule, finding.about) in open_before and _cites(finding, source):
                 closes[finding.rule] = None

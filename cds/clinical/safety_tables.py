@@ -36,6 +36,7 @@ class Harm:
     egfr_below: float | None = None
     daily_mg_above: float | None = None
     admission_within_days: int | None = None
+    age_above_years: int | None = None
     as_needed_too: bool = True
 
 
@@ -45,6 +46,7 @@ class Interaction:
 
     `ended_within_hours`: an ended course of either side counts for so long. `milder_when_potassium_below` lowers the
     severity to caution. `test_from_days` and `test_within_days` ask for potassium and creatinine after the meeting.
+    `either_may_end`: where the other side is recorded as not tolerated, that is the one to act on.
     """
 
     id: str
@@ -67,6 +69,7 @@ class Interaction:
     milder_when_potassium_below: float | None = None
     test_from_days: int | None = None
     test_within_days: int | None = None
+    either_may_end: bool = False
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -74,7 +77,7 @@ class TreatmentLimit:
     """A limit on a value under a running drug: `analyte sign value` has `effect` on the drug's dose.
 
     `is_rise_percent`: the value is the rise in percent since before the last start or increase. `again_within_days`: a
-    second value on another day, so recent, must hold as well.
+    second value on another day, so recent, must hold as well. `beside_classes`: only while one of these is taken too.
     """
 
     id: str
@@ -91,6 +94,7 @@ class TreatmentLimit:
     is_rise_percent: bool = False
     again_within_days: int | None = None
     phenotypes: tuple[PhenotypeKind, ...] = ()
+    beside_classes: tuple[str, ...] = ()
     unless: tuple[str, ...] = ()
     recheck_from_days: int | None = None
     recheck_within_days: int | None = None

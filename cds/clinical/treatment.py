@@ -43,12 +43,15 @@ def verdicts(situation: Situation, course: DrugCourse) -> tuple[Verdict, ...]:
     if course.state not in ("active", "unclear"):
         return ()
     present = concepts_present(situation)
+    taken = {c.drug_class for c in situation.courses if c.state in ("active", "unclear")}
     rise = creatinine_rise(situation, course)
     found = []
     for row in situation.tables.safety.treatment_limits:
         if course.drug_class not in row.drug_classes or (row.drugs and course.drug not in row.drugs):
             continue
         if not present.isdisjoint(row.unless) or (row.phenotypes and situation.phenotype.kind not in row.phenotypes):
+            continue
+        if row.beside_classes and taken.isdisjoint(row.beside_classes):
             continue
         verdict = _rise_verdict(row, rise, situation) if row.is_rise_percent else _value_verdict(situation, row)
         if verdict is not None:

@@ -6,12 +6,13 @@ import hashlib
 import string
 import tomllib
 from collections.abc import Iterable, Mapping
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 from functools import cache
 from importlib.resources import files
 from typing import Any
 
 from cds.cards.card import FAMILIES, TIERS, CardBasis, Tier
+from cds.cards.replies import ReplyLimits
 from cds.cards.wording import CardWords, Wording
 from cds.clinical import units
 from cds.clinical.evaluate import ANSWERS
@@ -80,8 +81,14 @@ class Content:
     codes: CodeBook
     wording: Wording
     order_codes: OrderCodes
+    reply_limits: ReplyLimits
     version: str
     sha256: str
+    site: str | None = None  # name, version and hash of the site profile laid over it
+    signed_off: str | None = None  # who signed this content off, and when; nobody until a site says so
+    rules_off: frozenset[str] = frozenset()
+    zone: str | None = None
+    default_units: Mapping[str, str] = field(default_factory=dict)  # units a site's systems leave out, by analyte
 
 
 @cache
@@ -95,6 +102,7 @@ def load_content() -> Content:
         tables=tables,
         codes=load_code_book(),
         wording=_wording(raw, tables),
+        reply_limits=_reply_limits(raw["wording.toml"]),
         order_codes=order_codes(raw["tests.toml"]),
         version=_text(raw["version.toml"], "version", "version.toml"),
         sha256=content_sha256(),
@@ -307,6 +315,14 @@ def _wording(raw: Mapping[str, dict[str, Any]], tables: ClinicalTables) -> Wordi
         recommendation_bases={key: _card_basis(row.basis, sources, row) for key, row in tables.recommendations.items()},
         limit_bases=_limit_bases(tables, sources),
     )
+
+
+def _reply_limits(words: Mapping[str, Any]) -> ReplyLimits:
+    limits = ReplyLimits(days=dict(words["replies_hold"]), danger_days=dict(words["replies_hold_danger"]))
+    for code in words["replies"]:
+        if not all(isinstance(days.get(code), int) for days in (limits.days, limits.danger_days)):
+            raise ContentError("wording.toml", "replies_hold", f"has no number of days for '{code}'", "Add it.")
+    return limits
 
 
 def _card_words(rule: str, action: str, row: Mapping[str, str]) -> CardWords:

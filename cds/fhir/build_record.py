@@ -58,7 +58,9 @@ class BuiltRecord:
         return () if self.record is None else self.record.other_medicines
 
 
-def build_record(patient: PatientResources, codes: CodeBook, zone: tzinfo) -> BuiltRecord:
+def build_record(
+    patient: PatientResources, codes: CodeBook, zone: tzinfo, *, default_units: Mapping[str, str] | None = None
+) -> BuiltRecord:
     """Read all resources of one patient; calendar days are days in `zone`. Raises nothing, whatever they hold."""
     intake = Intake()
     intake.issues.extend(patient.issues)
@@ -66,7 +68,7 @@ def build_record(patient: PatientResources, codes: CodeBook, zone: tzinfo) -> Bu
     if issue is not None:
         intake.issues.append(issue)
         return _built(patient, None, intake)
-    context = Context(codes=codes, zone=zone, intake=intake)
+    context = Context(codes=codes, zone=zone, intake=intake, default_units=default_units or {})
     resources, resolve = _through_the_gate(patient, intake)
     return _built(patient, _record(patient, resources, resolve, context), intake)
 

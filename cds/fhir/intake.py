@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections import Counter
+from collections.abc import Mapping
 from dataclasses import dataclass, field
 from datetime import tzinfo
 
@@ -47,3 +48,4 @@ class Context:
     codes: CodeBook
     zone: tzinfo
     intake: Intake
+    default_units: Mapping[str, str] = field(default_factory=dict)  # units a site's systems leave out, by analyte

@@ -55,6 +55,7 @@ class _Place:
     resource: str
     analyte: str
     path: str
+    default_unit: str | None = None
 
     def refuse(self, below: str, problem: str, fix: str = _AS_QUANTITY) -> NoReturn:
         raise ResourceError(self.resource, f"{self.path}{below}", problem, fix)
@@ -65,8 +66,12 @@ def values_in(element: Mapping[str, Any]) -> tuple[str, ...]:
     return tuple(sorted(key for key, value in element.items() if key.startswith("value") and value is not None))
 
 
-def read_amount(element: Mapping[str, Any], analyte: str, resource: str, prefix: str = "") -> Amount:
+def read_amount(
+    element: Mapping[str, Any], analyte: str, resource: str, prefix: str = "", *, default_unit: str | None = None
+) -> Amount:
     """Read the one value[x] of `element` for `analyte`. `prefix` is the path of the element ("component[0].").
+
+    `default_unit` is what a site says its system leaves out.
 
     Raises ResourceError, without the value, for no value or several, a type that is not read, a number or unit that is
     not understood.
@@ -77,7 +82,7 @@ def read_amount(element: Mapping[str, Any], analyte: str, resource: str, prefix:
         raise ResourceError(resource, f"{prefix}value", problem, "Send exactly one value, best as valueQuantity")
     name = names[0]
     value = element[name]
-    place = _Place(resource, analyte, f"{prefix}{name}")
+    place = _Place(resource, analyte, f"{prefix}{name}", default_unit)
     if analyte == "nyha-class":
         return _nyha(name, value, place)
     match name:
@@ -177,6 +182,8 @@ def _unit_if_none(number: float, place: _Place) -> tuple[str, tuple[str, ...]]:
     canonical = units.CANONICAL_UNIT[place.analyte]
     if canonical == "1":
         return canonical, ()
+    if place.default_unit is not None:
+        return place.default_unit, (f"sent without unit; taken as {place.default_unit} as the site profile says",)
     unit = UNIT_IF_NONE.get(place.analyte)
     if unit is None:
         below = ".code" if place.path.endswith("valueQuantity") else ""

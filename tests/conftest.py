@@ -15,7 +15,7 @@ from cds.cli import main
 _SLOW_IS_FINE = [HealthCheck.too_slow, HealthCheck.data_too_large]
 
 settings.register_profile(
-    "few", max_examples=40, derandomize=True, database=None, deadline=None, suppress_health_check=_SLOW_IS_FINE
+    "few", max_examples=30, derandomize=True, database=None, deadline=None, suppress_health_check=_SLOW_IS_FINE
 )
 settings.register_profile(
     "deep", max_examples=1000, database=None, deadline=None, print_blob=True, suppress_health_check=_SLOW_IS_FINE

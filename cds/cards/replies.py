@@ -46,9 +46,9 @@ def facts_of(card: Card) -> str:
     return hashlib.sha256("\x1f".join(parts).encode()).hexdigest()[:16]
 
 
-def held_until(reply: Reply, card: Card, limits: ReplyLimits) -> date:
-    """The last day on which the reply holds the card back, if its facts stay as they were."""
-    days = (limits.danger_days if card.tier == "danger" else limits.days)[reply.code]
+def longest_hold(reply: Reply, tier: str, limits: ReplyLimits) -> date:
+    """The last day on which the reply holds a card of the tier back, if its facts stay as they were."""
+    days = (limits.danger_days if tier == "danger" else limits.days)[reply.code]
     longest = reply.made_at.date() + timedelta(days=days)
     return min(reply.until, longest) if reply.until is not None else longest
 
@@ -68,7 +68,7 @@ def hold_back(
     held: list[HeldBack] = []
     for card in cards:
         reply_to = newest.get(card.card_id)
-        until = held_until(reply_to, card, limits) if reply_to is not None else None
+        until = longest_hold(reply_to, card.tier, limits) if reply_to is not None else None
         if reply_to is not None and until is not None and reply_to.facts == facts_of(card) and today <= until:
             held.append(
                 HeldBack(card_id=card.card_id, rule=card.rule, about=card.about, reason="answered", until=until)

@@ -27,9 +27,17 @@ def judge(situation: Situation, drug: str, drug_class: str, *, leaving_out: froz
 
 
 def standing_against(
-    situation: Situation, drug: str, drug_class: str, *, leaving_out: frozenset[str] = frozenset()
+    situation: Situation,
+    drug: str,
+    drug_class: str,
+    *,
+    leaving_out: frozenset[str] = frozenset(),
+    is_raise: bool = False,
 ) -> Judgement:
-    """Only the recorded facts (problems, devices, other drugs) that stand against the drug, without its limits."""
+    """Only the recorded facts (problems, devices, other drugs) that stand against the drug, without its limits.
+
+    `is_raise` asks about a higher dose of a running drug: some rows speak only of that.
+    """
     judgement = Judgement(drug, drug_class)
     present = concepts_present(situation)
     for barrier in situation.tables.barriers:
@@ -37,7 +45,9 @@ def standing_against(
         if is_meant and barrier.id not in leaving_out and present.isdisjoint(barrier.unless):
             _hold_barrier(situation, barrier, judgement, present)
     for row in situation.tables.drug_barriers:
-        if row.id not in leaving_out and concerns(row.drug_classes, row.drugs, (), drug, drug_class):
+        if row.id in leaving_out or (row.only_for_raise and not is_raise):
+            continue
+        if concerns(row.drug_classes, row.drugs, (), drug, drug_class):
             _hold_drug_barrier(situation, row, judgement, present)
     return judgement
 
@@ -137,6 +147,8 @@ def _hold_drug_barrier(situation: Situation, row: DrugBarrier, judgement: Judgem
             continue
         if row.route is not None and course.route != row.route:
             continue
+        if row.started_within_days is not None and not _begun_within(situation, course, row.started_within_days):
+            continue
         least = row.at_least_daily_mg.get(course.drug)
         if row.at_least_daily_mg and (least is None or (course.daily_dose_mg or 0.0) < least):
             continue
@@ -154,6 +166,12 @@ def _hold_drug_barrier(situation: Situation, row: DrugBarrier, judgement: Judgem
                 free = last.last_instant(situation.as_of.tzinfo) + timedelta(hours=row.ended_within_hours)
                 judgement.look_again.append(free.date())
             return
+
+
+def _begun_within(situation: Situation, course: DrugCourse, days: int) -> bool:
+    """True if the course was begun or changed within the days before today, or may have been."""
+    begun = course.changed if course.changed is not None else course.started
+    return begun is not None and (situation.today - begun.latest).days <= days
 
 
 def _ended_within(situation: Situation, course: DrugCourse, hours: float) -> bool:

@@ -9,7 +9,7 @@ from datetime import datetime
 from cds.clinical.evaluate import findings_in
 from cds.clinical.findings import Finding
 from cds.clinical.record import MedicationEntry, PatientRecord
-from cds.clinical.rules.orders import OrderUnderCheck, order_findings
+from cds.clinical.rules.orders import DOSE, LIMITS, TESTS, OrderUnderCheck, order_findings
 from cds.clinical.situation import Situation, understand
 from cds.clinical.tables import ClinicalTables
 from cds.clinical.timeline import PartialDate
@@ -71,7 +71,8 @@ def check_orders(
         first_doses={order.drug: order.first_dose for order in orders},
     )
     open_before = {(f.rule, f.about): f for f in findings_in(before, rules_off=rules_off) if f.outcome == "open"}
-    found_after = findings_in(after, rules_off=rules_off)
+    answers = findings_in(after, rules_off=rules_off)
+    found_after = [f for f in answers if f.about not in drugs or not _is_told_by_the_dose(f, rules_off)]
     checked = [
         _checked(source, [o for o in orders if o.source == source], before, after, open_before, found_after, rules_off)
         for source in sorted(drafts)
@@ -115,6 +116,9 @@ def _checked(
         for finding in found_after:
             if finding.outcome == "met" and (finding.rule, finding.about) in open_before and _cites(finding, source):
                 closes[finding.rule] = None
+    if any(f.severity == "contraindicated" or (f.rule == LIMITS and f.severity == "major") for f in found):
+        found = [f for f in found if f.rule != TESTS]  # no tests for an order that should not be signed
+        closes = {}
     drugs = tuple(dict.fromkeys(order.drug for order in orders))
     unique = {(f.rule, f.about, f.action): f for f in found}
     return CheckedOrder(source=source, drugs=drugs, findings=tuple(unique.values()), closes=tuple(closes))
@@ -124,6 +128,12 @@ def _was_open(finding: Finding, open_before: dict[tuple[str, str | None], Findin
     """True if the same was said without the order. A danger of the ordered drug itself is said again."""
     known = open_before.get((finding.rule, finding.about))
     return known is not None and known.action == finding.action and finding.rule not in _ABOUT_THE_DRUG
+
+
+def _is_told_by_the_dose(finding: Finding, rules_off: frozenset[str]) -> bool:
+    """Above the highest dose of the table: no limit on a value, and `order-dose` says the same of the order."""
+    is_above_highest = finding.rule == "lower-dose" and finding.outcome == "open" and not finding.limits
+    return is_above_highest and DOSE not in rules_off
 
 
 def _is_about(finding: Finding, order: OrderUnderCheck, after: Situation) -> bool:

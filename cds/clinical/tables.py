@@ -121,6 +121,8 @@ class DrugBarrier:
     active_drugs: tuple[str, ...] = ()
     route: str | None = None
     ended_within_hours: float | None = None
+    started_within_days: int | None = None  # only where the other drug was begun or changed so recently
+    only_for_raise: bool = False
     needs_concepts: tuple[str, ...] = ()
 
 

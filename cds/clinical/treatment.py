@@ -75,6 +75,26 @@ def creatinine_rise(situation: Situation, course: DrugCourse) -> Rise | None:
     return Rise(percent=percent, now=reading_of(now), before=reading_of(base))
 
 
+def recently_stopping(situation: Situation, course: DrugCourse) -> Reading | None:
+    """A value of the last days, not the newest, at which the course would have had to stop: a raise is weighed first.
+
+    Of a second value within days (`again_within_days`) and of a rise only today counts.
+    """
+    limits = situation.tables.safety.limits
+    present = concepts_present(situation)
+    for row in situation.tables.safety.treatment_limits:
+        if row.effect != "stop" or row.is_rise_percent or row.again_within_days is not None:
+            continue
+        if course.drug_class not in row.drug_classes or not present.isdisjoint(row.unless):
+            continue
+        for measurement in usable(situation.record, row.analyte):
+            reading = reading_of(measurement)
+            is_recent = days_old(measurement.taken, situation.today) <= limits.value_counts_days
+            if is_recent and row.unit in reading.by_unit and reading.holds(row.sign, row.value, row.unit):
+                return reading
+    return None
+
+
 def fresh_readings(situation: Situation, analyte: str) -> tuple[Reading, ...]:
     """The newest day's readings if they are recent enough to change a dose."""
     days = situation.tables.safety.limits.value_counts_days

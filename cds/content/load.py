@@ -62,6 +62,7 @@ _TABLES = (
     "monitoring.toml",
     "phenotype.toml",
     "recommendations.toml",
+    "rules.toml",
     "sources.toml",
     "tests.toml",
     "therapy.toml",

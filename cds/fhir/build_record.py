@@ -22,10 +22,10 @@ from cds.fhir.encounters import read_encounter
 from cds.fhir.intake import Context, Intake, NotRecognised
 from cds.fhir.medications import read_medication
 from cds.fhir.observations import read_observation
+from cds.fhir.ordered_tests import read_service_request
 from cds.fhir.patient import read_patient
 from cds.fhir.procedures_devices import read_device, read_procedure
 from cds.fhir.stay_reasons import with_linked_reasons
-from cds.fhir.test_orders import read_service_request
 from cds.fhir.validate import refusal
 
 _MEDICATION_TYPES = ("MedicationRequest", "MedicationStatement", "MedicationDispense", "MedicationAdministration")

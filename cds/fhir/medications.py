@@ -33,6 +33,7 @@ NOT_RECOGNISED = "not recognised"
 NOT_SYSTEMIC = "not systemic: eye drops, gels and the like"
 NO_CLASS = "of no class used here"
 _MOST_REASONS = 50
+_MAXIMAL_DOSE = "maximal-tolerated-dose"
 _SEND_DATE = "Send a date as FHIR R4 writes it, a time with seconds and zone; the resource counts without it"
 
 
@@ -229,6 +230,10 @@ def _reasons(resource: Mapping[str, Any], status: EntryStatus, context: Context)
                 found |= dict.fromkeys(context.codes.reactions(concept))
         if found:
             break
+    stated = resource.get("reasonCode")
+    for concept in stated[:_MOST_REASONS] if isinstance(stated, list) else ():
+        if isinstance(concept, Mapping) and _MAXIMAL_DOSE in context.codes.reactions(concept):
+            found[_MAXIMAL_DOSE] = None  # said of a running order, it is about its dose, not its indication
     return tuple(found)
 
 

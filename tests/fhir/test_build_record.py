@@ -17,10 +17,10 @@ from cds.fhir.bundle import split_by_patient
 from cds.fhir.conditions import read_conditions
 from cds.fhir.encounters import read_encounter
 from cds.fhir.intake import Context, Intake
+from cds.fhir.ordered_tests import read_service_request
 from cds.fhir.patient import read_patient
 from cds.fhir.procedures_devices import read_device, read_procedure
 from cds.fhir.reading import Limits
-from cds.fhir.test_orders import read_service_request
 
 BOOK = load_code_book()
 LIMITS = Limits(max_bytes=10_000_000, max_entries=10_000, max_depth=100)

@@ -8,7 +8,7 @@ import pytest
 
 from cds.content.codes import load_code_book
 from cds.fhir.intake import Context, Intake
-from cds.fhir.test_orders import read_service_request
+from cds.fhir.ordered_tests import read_service_request
 
 BOOK = load_code_book()
 LOINC = "http://loinc.org"

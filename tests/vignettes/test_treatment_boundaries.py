@@ -83,7 +83,12 @@ def renal_and_potassium_pairs(prefix, drug):
     """What ACE inhibitor, ARB and ARNI have alike."""
     return [
         (f"{prefix}-potassium-stop", drug, k(5.9), k(6.0)),  # "above 6.0" in print; inclusive by policy
-        (f"{prefix}-potassium-lower", drug, k(5.5), k(5.6)),  # heart-failure practice tables (Postgrad Med J): above 5.5
+        (
+            f"{prefix}-potassium-lower",
+            drug,
+            k(5.5),
+            k(5.6),
+        ),  # heart-failure practice tables (Postgrad Med J): above 5.5
         (f"{prefix}-potassium-no-raise", drug, k(5.0), k(5.1)),  # STRONG-HF safety indicator: above 5.0
         # ESC practical guidance: above 3.5 mg/dL (310 umol/L), eGFR below 20, or a rise above 100 %
         (f"{prefix}-creatinine-stop", drug, crea(3.5), crea(3.51)),

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import copy
 import gzip
+import itertools
 import json
 import time
 from collections.abc import Iterator
@@ -438,8 +439,10 @@ def test_a_written_patient_with_junk_in_several_places_is_answered(data):
 @pytest.mark.deep
 @pytest.mark.parametrize("name", sorted(written_patients()))
 def test_junk_at_any_place_of_a_whole_written_patient_is_answered(name):
+    """One kind of junk a place, each kind in turn: all kinds at all places would take hours."""
     resources = resources_of(written_patients()[name][0])
+    kinds = itertools.cycle(JUNK)
     for number, resource in enumerate(resources):
         for path in places(resource):
-            for junk in JUNK:
-                answered(bundle(*resources[:number], replaced(resource, path, junk), *resources[number + 1 :]))
+            changed = replaced(resource, path, next(kinds))
+            answered(bundle(*resources[:number], changed, *resources[number + 1 :]))

@@ -34,8 +34,8 @@ from cds.fhir.dates import parse_as_of
 from cds.fhir.reading import COMMAND_LINE_LIMITS, read_json
 
 CONTENT = load_content()
-# What a finding says but for its sentences, where the units of the report stand.
-DECISIONS = ("rule", "about", "outcome", "action", "missing", "look_again_on", "due", "recommendations", "limits")
+# What a finding says but for its sentences (`because`, `missing`), where the units of the report stand.
+DECISIONS = ("rule", "about", "outcome", "action", "look_again_on", "due", "recommendations", "limits")
 
 
 def whole(data: bytes, as_of=AS_OF) -> bytes:
@@ -48,7 +48,9 @@ def one(resources: list[Resource], as_of=AS_OF) -> Answer:
 
 
 def decisions(answer: Answer) -> list[dict[str, Any]]:
-    return [{key: finding[key] for key in DECISIONS} for finding in answer["findings"]]
+    return [
+        {**{key: finding[key] for key in DECISIONS}, "gaps": len(finding["missing"])} for finding in answer["findings"]
+    ]
 
 
 def without_intake(answer: Answer) -> Answer:

@@ -7,7 +7,7 @@ from datetime import date, timedelta
 from cds.clinical.eligibility import standing_against, what_is_missing
 from cds.clinical.findings import Action, DrugProposal, Evidence, Finding, TestProposal
 from cds.clinical.harm import check_harm, is_taken
-from cds.clinical.readings import show
+from cds.clinical.readings import say_value, show
 from cds.clinical.record import DrugCourse
 from cds.clinical.rules.answers import blocked, met, not_applicable, unknown
 from cds.clinical.rules.arni import is_to_be_switched
@@ -16,7 +16,7 @@ from cds.clinical.rules.pillars import closes, course_evidence
 from cds.clinical.situation import Situation
 from cds.clinical.starting import dose_row, follow_up_tests
 from cds.clinical.tables import DoseRow
-from cds.clinical.treatment import Verdict, fresh_readings, verdicts
+from cds.clinical.treatment import Verdict, fresh_readings, recently_stopping, verdicts
 
 RAISE = "raise-dose"
 LOWER = "lower-dose"
@@ -115,7 +115,11 @@ def _open(
     situation: Situation, course: DrugCourse, row: DoseRow, share: str, evidence: tuple[Evidence, ...]
 ) -> Finding:
     step = _next_step(course, row)
-    weigh = standing_against(situation, course.drug, course.drug_class or "").reviews
+    weigh = list(standing_against(situation, course.drug, course.drug_class or "", is_raise=True).reviews)
+    scare = recently_stopping(situation, course)
+    if scare is not None:
+        weigh.append(f"{say_value(scare, situation.tables)} would have stopped it")
+        evidence = (*evidence, scare.evidence("limits"))
     is_review = situation.phenotype.kind in _FOR_REVIEW or bool(weigh)
     action: Action = "review" if is_review else "raise"
     because = f"{course.drug.capitalize()}: {share}, unchanged since {course.changed}. Nothing recorded stands against the next step"
@@ -167,10 +171,20 @@ def _not_now(
         words = "; ".join(dict.fromkeys(v.words for v in limiting))
         return f"Not today: {words}.", None, tuple(limiting)
     if course.changed is not None:
-        ready = course.changed.latest + timedelta(days=row.min_interval_days)
+        ready = course.changed.latest + timedelta(days=_interval(situation, course, row))
         if situation.today < ready:
             return f"Too early: changed on {course.changed}, next step from {ready}.", ready, ()
     return None
+
+
+def _interval(situation: Situation, course: DrugCourse, row: DoseRow) -> int:
+    """Days between steps. Where the start dose depends on what was taken before, the row of the dose begun with counts."""
+    starts = [r for r in situation.tables.doses if r.drug == course.drug and r.start_kind is not None]
+    if not starts:
+        return row.min_interval_days
+    begun_with = course.history[0].daily_mg if course.history else None
+    fitting = [r for r in starts if begun_with == r.start_dose_mg * r.start_times_per_day]
+    return max(r.min_interval_days for r in fitting or starts)
 
 
 def _tolerance(situation: Situation, course: DrugCourse) -> str | None:
@@ -331,7 +345,10 @@ def _ask(situation: Situation, course: DrugCourse, asking: list[Verdict]) -> Fin
 
 
 def _lower_step(situation: Situation, course: DrugCourse) -> DrugProposal | None:
-    """The rung below the present dose; for an MRA at its lowest rung the same dose every other day; else none."""
+    """The highest rung at or below half the dose; for an MRA at its lowest rung the same dose every other day; else none.
+
+    The practice tables of 2005 (Postgrad Med J) and the NHS pages on MRAs halve.
+    """
     row = dose_row(situation, course.drug)
     if row is None or course.daily_dose_mg is None:
         return None
@@ -339,7 +356,8 @@ def _lower_step(situation: Situation, course: DrugCourse) -> DrugProposal | None
     each = course.daily_dose_mg / row.target_times_per_day
     lower = [step for step in row.steps_mg if step < each]
     if lower:
-        return _proposal(course, row, max(lower), row.target_times_per_day, note)
+        halved = max((step for step in lower if step <= each / 2), default=max(lower))
+        return _proposal(course, row, halved, row.target_times_per_day, note)
     if course.drug_class == "mra" and each in row.steps_mg:
         return _proposal(course, row, each, 0.5, note)
     return None

@@ -110,6 +110,12 @@ def _haemolysed(situation: Situation) -> Finding | None:
     reading = reading_of(of_day[0])
     due_by = max(newest, situation.today)
     because = f"{sentence(say_value(reading, situation.tables))} is from a haemolysed sample: change nothing on it, repeat it the same day."
+    rows = (
+        row for row in situation.tables.safety.out_of_range if row.analyte == "potassium" and row.sign in (">", ">=")
+    )
+    raised_by = _bears_on(situation, "potassium")
+    if raised_by and any(reading.holds(row.sign, row.value, row.unit) for row in rows):
+        because += f" The next dose of {' and '.join(raised_by)} can wait until the repeat is seen."
     return Finding(
         rule=RULE,
         about="potassium",

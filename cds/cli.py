@@ -8,10 +8,15 @@ from __future__ import annotations
 import sys
 from collections.abc import Callable
 from datetime import datetime, tzinfo
-from typing import Any, NoReturn
+from typing import TYPE_CHECKING, Any, NoReturn, TypeVar
 
 import click
 
+if TYPE_CHECKING:
+    from cds.content.load import Content
+    from cds.service.settings import Settings
+
+T = TypeVar("T")
 EXIT_CODES = """\b
 Exit codes:
   0   done; what could not be used is listed as issues
@@ -20,10 +25,15 @@ Exit codes:
   11  with --strict: at least one resource was refused
   12  the input is larger, longer or deeper than allowed
   13  the input holds no patient that can be assessed
+  14  a request over HTTP cannot be served as sent
   20  our own tables are wrong
+  21  a setting of the service is wrong
+  22  the site profile is wrong
+  30  the store of replies cannot be used
+  69  a part is not installed
   70  an error of the program itself
 """
-_STRICT, _NO_PATIENT, _OWN_ERROR = 11, 13, 70
+_STRICT, _NO_PATIENT, _NOT_INSTALLED, _OWN_ERROR = 11, 13, 69, 70
 _PATIENTS = ("assessments", "records", "checks")  # one list in each answer
 
 
@@ -34,6 +44,15 @@ def main() -> None:
 
     Advice for licensed clinicians; content is not clinically signed off.
     """
+
+
+_site_option = click.option(
+    "--site",
+    type=click.Path(exists=True, dir_okay=False),
+    metavar="PROFILE.toml",
+    envvar="GDMT_CARDS_SITE",
+    help="Site profile to lay over the content.",
+)
 
 
 def _input_options(command: Callable[..., None]) -> Callable[..., None]:
@@ -48,6 +67,7 @@ def _input_options(command: Callable[..., None]) -> Callable[..., None]:
             envvar="GDMT_CARDS_ZONE",
             help="Time zone (IANA name) whose calendar days count.",
         ),
+        _site_option,
         click.option(
             "--as-of",
             "as_of",
@@ -63,44 +83,140 @@ def _input_options(command: Callable[..., None]) -> Callable[..., None]:
 @main.command(epilog=EXIT_CODES)
 @_input_options
 @click.option("--trace", is_flag=True, help="List every rule's finding, not only the cards.")
-def assess(bundle: str, as_of: str | None, zone: str, strict: bool, trace: bool) -> None:
+def assess(bundle: str, as_of: str | None, zone: str, site: str | None, strict: bool, trace: bool) -> None:
     """Assess each patient of BUNDLE.json (or of standard input, "-") and print their cards as JSON."""
 
     def work(data: bytes, moment: datetime) -> dict[str, Any]:
         from cds import assessment
-        from cds.content.load import load_content
 
-        return assessment.assess(data, load_content(), as_of=moment, trace=trace)
+        return assessment.assess(data, _content(site), as_of=moment, trace=trace)
 
     _run(work, bundle, as_of, zone, strict=strict)
 
 
 @main.command(epilog=EXIT_CODES)
 @_input_options
-def record(bundle: str, as_of: str | None, zone: str, strict: bool) -> None:
+def record(bundle: str, as_of: str | None, zone: str, site: str | None, strict: bool) -> None:
     """Print what was understood of each patient's data in BUNDLE.json, and what was not, as JSON."""
 
     def work(data: bytes, moment: datetime) -> dict[str, Any]:
         from cds import assessment
-        from cds.content.load import load_content
 
-        return assessment.describe_records(data, load_content(), as_of=moment)
+        return assessment.describe_records(data, _content(site), as_of=moment)
 
     _run(work, bundle, as_of, zone, strict=strict)
 
 
 @main.command("check-order", epilog=EXIT_CODES)
 @_input_options
-def check_order(bundle: str, as_of: str | None, zone: str, strict: bool) -> None:
+def check_order(bundle: str, as_of: str | None, zone: str, site: str | None, strict: bool) -> None:
     """Check the orders under the pen (the MedicationRequests of BUNDLE.json with status "draft") and print the answer."""
 
     def work(data: bytes, moment: datetime) -> dict[str, Any]:
         from cds import assessment
-        from cds.content.load import load_content
 
-        return assessment.check_orders(data, load_content(), as_of=moment)
+        return assessment.check_orders(data, _content(site), as_of=moment)
 
     _run(work, bundle, as_of, zone, strict=strict)
+
+
+@main.command()
+@click.argument("rule", required=False)
+@click.option(
+    "--format",
+    "form",
+    type=click.Choice(["text", "markdown", "json"]),
+    default="text",
+    show_default=True,
+    help="How to print it.",
+)
+@_site_option
+def rules(rule: str | None, form: str, site: str | None) -> None:
+    """Print the rule catalogue, or one RULE: what it asks, its numbers and sources, what it needs and never does."""
+    from cds.content.catalogue import as_markdown, as_text, catalogue
+
+    found = [one for one in catalogue(_checked(lambda: _content(site))) if rule in (None, one["rule"])]
+    if not found:
+        raise click.BadParameter("no rule has this id; without one all are listed.", param_hint="RULE")
+    if form == "json":
+        _print({"format": "gdmt-cards/rules", "format_version": "1.0", "rules": found})
+    else:
+        click.echo(as_text(found) if form == "text" else as_markdown(found))
+
+
+@main.command()
+def serve() -> None:
+    """Serve cards over HTTP, by the settings in GDMT_CARDS_* variables; on loopback unless they say otherwise."""
+    _served(lambda settings: _serve(settings))
+
+
+@main.command()
+@click.option("--before", metavar="DATE", help="Remove what was kept before this day. Default: by the settings.")
+@click.option("--forget", "patient", metavar="PATIENT", help='Remove all that was kept of one patient, "Patient/id".')
+def purge(before: str | None, patient: str | None) -> None:
+    """Remove replies and shown cards from the store: older than a day, or all of one patient."""
+    from datetime import date, timedelta
+
+    def work(settings: Settings) -> None:
+        from cds.store import open_store
+
+        try:
+            day = date.fromisoformat(before) if before is not None else None
+        except ValueError:
+            raise click.BadParameter("it is no day: write YYYY-MM-DD.", param_hint="--before") from None
+        store = open_store(settings.store_url, secret=settings.store_secret, keep_references=settings.keep_references)
+        try:
+            if patient is not None:
+                count = store.forget(patient)
+            else:
+                last = datetime.now(settings.zone).date() - timedelta(days=settings.retention_days)
+                count = store.purge(day if day is not None else last)
+        finally:
+            store.close()
+        click.echo(f"removed: {count.replies} replies, {count.shown_cards} shown cards")
+
+    _served(work)
+
+
+def _serve(settings: Settings) -> None:
+    from cds.service.serve import serve as start
+
+    start(settings)
+
+
+def _served(work: Callable[[Settings], None]) -> None:
+    """Read the settings and do work that needs the extra `service`."""
+    import os
+
+    try:
+        from cds.service.settings import read_settings
+    except ModuleNotFoundError as error:
+        _stop(f"{error.name} is not installed.\nInstall the extra: pip install 'gdmt-cards[service]'", _NOT_INSTALLED)
+    _checked(lambda: work(read_settings(os.environ)))
+
+
+def _content(site: str | None) -> Content:
+    """The content, with the site profile laid over it if there is one."""
+    from cds.content.load import load_content
+
+    content = load_content()
+    if site is None:
+        return content
+    from cds.content.site import read_site
+    from cds.content.site_overlay import with_site
+
+    with click.open_file(site, "rb") as stream:
+        return with_site(content, read_site(stream.read(), name=site))
+
+
+def _checked(work: Callable[[], T]) -> T:
+    """Turn an error of ours into its message and exit code."""
+    from cds.errors import CdsError
+
+    try:
+        return work()
+    except CdsError as error:
+        _stop(str(error), error.exit_code)
 
 
 def _run(

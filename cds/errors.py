@@ -6,7 +6,9 @@
     │   └── NoPatientError         nothing to assess: no Patient resource         exit 13   422
     ├── RequestError               a request over HTTP cannot be served         exit 14   its own
     ├── ResourceError              one FHIR resource cannot be used as sent       exit 11   422
-    └── ContentError               our own tables are wrong: refuse to start      exit 20   500
+    ├── ContentError               our own tables are wrong: refuse to start      exit 20   500
+    └── in the packages that raise them: SettingsError 21 (500), SiteProfileError 22 (500), StoreError 30 (503) and its
+        kinds 31 (422), 32 (409), TokenError 40 (401), ScopeError 41 (403), KeysError 42, FetchError 43 (400 to 504)
 
 A message names the resource, the place, the problem and the way out. It never repeats a patient's values.
 """

@@ -10,8 +10,9 @@ from cds.cards.card import Card, HeldBack
 from cds.cards.folding import make_cards
 from cds.cards.ordering import held_back_order
 from cds.cards.replies import Reply, hold_back
-from cds.cards.shape import card_shape, finding_shape, gate_shape, held_back_shape, phenotype_shape
+from cds.cards.shape import card_shape, finding_shape, gate_shape, held_back_shape, phenotype_shape, pillars_shape
 from cds.clinical.evaluate import findings_in
+from cds.clinical.order_check import CheckedOrder, OrderCheck
 from cds.clinical.order_check import check_orders as check_drafts
 from cds.clinical.situation import Situation, understand
 from cds.content.load import Content
@@ -23,6 +24,7 @@ from cds.fhir.reading import COMMAND_LINE_LIMITS, Limits, read_json
 from cds.fhir.record_shape import course_issues, issue_shape, record_shape
 
 FORMAT_VERSION = "1.0"
+_CLOSING = ("deceased", "under-age")  # no rule at all was asked
 RepliesOf = Callable[[str], Iterable[Reply]]
 
 
@@ -124,7 +126,7 @@ def _order_check(
             {
                 "order": order.source,
                 "drugs": list(order.drugs),
-                "verdict": "cards" if shown else "closes" if order.closes else "clear",
+                **_verdict(order, bool(shown), check, built),
                 "closes": list(order.closes),
                 "cards": [_card_shape(card, check.after, content) for card in shown],
             }
@@ -141,6 +143,7 @@ def _order_check(
     issues = [*built.issues, *course_issues(check.after.courses)]
     return {
         "patient": built.patient,
+        "gates": [gate_shape(gate) for gate in check.after.gates],
         "orders": orders,
         "cards": [_card_shape(card, check.after, content) for card in shown],
         "held_back": [held_back_shape(item) for item in sorted(held_back, key=held_back_order)],
@@ -150,6 +153,24 @@ def _order_check(
             "issues": [issue_shape(issue) for issue in issues],
         },
     }
+
+
+def _verdict(order: CheckedOrder, has_cards: bool, check: OrderCheck, built: BuiltRecord) -> dict[str, str | None]:
+    """What to say of an order in one word, and why nothing is said where nothing was checked."""
+    if has_cards:
+        return {"verdict": "cards", "because": None}
+    if order.closes:
+        return {"verdict": "closes", "because": None}
+    closed = next((gate for gate in check.after.gates if gate.id in _CLOSING), None)
+    if closed is not None:
+        return {"verdict": "not-checked", "because": closed.words}
+    other = next((m for m in built.other_medicines if m.source == order.source), None)
+    if other is not None and other.is_unread:
+        return {"verdict": "not-checked", "because": "The medicine is in none of our tables."}
+    if other is None and not order.drugs:
+        return {"verdict": "not-checked", "because": "The order could not be read: see the issues."}
+    gate = next(iter(check.after.gates), None)
+    return {"verdict": "clear", "because": gate.words if gate is not None else None}
 
 
 def _card_shape(card: Card, situation: Situation, content: Content) -> dict[str, Any]:
@@ -176,6 +197,7 @@ def assess_patient(
         "patient": built.patient,
         "phenotype": phenotype_shape(situation.phenotype),
         "gates": [gate_shape(gate) for gate in situation.gates],
+        "pillars": pillars_shape(findings),
         "cards": [_card_shape(card, situation, content) for card in shown],
         "held_back": [held_back_shape(item) for item in sorted((*made.held_back, *answered), key=held_back_order)],
         **({"findings": [finding_shape(finding) for finding in findings]} if trace else {}),

@@ -256,7 +256,8 @@ def _moment(as_of: str | None, zone: str) -> datetime:
     try:
         return parse_as_of(as_of, where)
     except DateNotUnderstood as error:
-        raise click.BadParameter(f"it {error.problem}.", param_hint="--as-of") from None
+        way_out = "Write YYYY-MM-DD, or an instant with seconds and time zone."
+        raise click.BadParameter(f"it {error.problem}. {way_out}", param_hint="--as-of") from None
 
 
 def _zone(name: str) -> tzinfo:

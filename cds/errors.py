@@ -8,7 +8,7 @@
     ├── ResourceError              one FHIR resource cannot be used as sent       exit 11   422
     ├── ContentError               our own tables are wrong: refuse to start      exit 20   500
     └── in the packages that raise them: SettingsError 21 (500), SiteProfileError 22 (500), StoreError 30 (503) and its
-        kinds 31 (422), 32 (409), TokenError 40 (401), ScopeError 41 (403), KeysError 42, FetchError 43 (400 to 504)
+        kinds 31 (422), 32 (409), TokenError 40 (401), ScopeError 41 (403), KeysError 42, FetchError 40 as well (400 to 504)
 
 A message names the resource, the place, the problem and the way out. It never repeats a patient's values.
 """

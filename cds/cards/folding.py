@@ -191,6 +191,9 @@ def _cautions(situation: Situation, findings: list[Finding], is_from_memory: boo
     keys = [key for finding in findings for key in finding.cautions]
     if any(finding.drug_proposals or finding.test_proposals for finding in findings):
         keys.append("draft")
+    starts = any(f.action in ("start", "switch") for f in findings)
+    if starts and any(m.is_unread and m.status in ("active", "unknown") for m in situation.record.other_medicines):
+        keys.append("unread")
     if any(proposal.alternatives for finding in findings for proposal in finding.drug_proposals):
         keys.append("alternatives")
     cited = {fact.resource for finding in findings for fact in finding.evidence}

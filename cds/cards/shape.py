@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Iterable, Mapping, Sequence
 from typing import Any
 
 from cds.cards.card import Card, CardBasis, HeldBack
@@ -74,6 +74,15 @@ def phenotype_shape(phenotype: Phenotype) -> Shape:
         "because": phenotype.because,
         "flags": list(phenotype.flags),
         "evidence": [evidence_shape(fact) for fact in phenotype.evidence],
+    }
+
+
+def pillars_shape(findings: Iterable[Finding]) -> Shape:
+    """Give for each pillar what its rule answers, so that no card is not taken for all is well."""
+    return {
+        finding.about: {"outcome": finding.outcome, "because": finding.because}
+        for finding in findings
+        if finding.rule.startswith("start-") and finding.about is not None
     }
 
 

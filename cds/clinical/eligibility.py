@@ -11,19 +11,39 @@ from cds.clinical.findings import Evidence
 from cds.clinical.judgement import Answer as Answer
 from cds.clinical.judgement import Judgement as Judgement
 from cds.clinical.judgement import concerns
+from cds.clinical.readings import show
 from cds.clinical.record import DrugCourse, Intolerance, Problem
 from cds.clinical.situation import Situation, concepts_present
 from cds.clinical.start_values import hold_measurements, hold_needs
 from cds.clinical.tables import Barrier, DrugBarrier, Effect
 from cds.clinical.timeline import PartialDate
+from cds.clinical.treatment import creatinine_rise
 
 
 def judge(situation: Situation, drug: str, drug_class: str, *, leaving_out: frozenset[str] = frozenset()) -> Judgement:
     """Hold every row that concerns the drug against the situation, but those whose id is in `leaving_out`."""
     judgement = standing_against(situation, drug, drug_class, leaving_out=leaving_out)
     _hold_reactions(situation, judgement)
+    _hold_rise(situation, judgement)
     hold_measurements(situation, judgement, concepts_present(situation))
     return judgement
+
+
+def _hold_rise(situation: Situation, judgement: Judgement) -> None:
+    """A rise of creatinine under a RAS inhibitor that is not settled: nothing that moves the kidney is started unweighed."""
+    limits = situation.tables.safety
+    ras = {c for row in limits.treatment_limits if row.is_rise_percent for c in row.drug_classes}
+    if judgement.drug_class not in ras | {"mra"}:
+        return
+    for course in situation.courses:
+        if course.drug_class not in ras or course.state not in ("active", "unclear"):
+            continue
+        rise = creatinine_rise(situation, course)
+        if rise is not None and rise.percent >= limits.limits.rise_from_percent:
+            words = f"creatinine rose by {show(rise.percent)} % under {course.drug} and is not settled"
+            facts = [rise.now.evidence("limits"), rise.before.evidence("supports")]
+            judgement.add("review", words, "creatinine-rise", facts)
+            return
 
 
 def standing_against(

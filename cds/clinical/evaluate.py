@@ -40,7 +40,7 @@ _START = ("start", "review", "unknown", "blocked", "refer")
 # What each rule may put on a card: its actions, and "unknown" or "blocked" where those ask for something.
 ANSWERS: Mapping[str, tuple[str, ...]] = {
     "stop-harmful-drug": ("stop", "stop-if-taken", "review", "unknown"),
-    "interaction": ("stop", "stop-if-taken", "review"),
+    "interaction": ("stop", "stop-if-taken", "review", "review-if-taken"),
     "lab-out-of-range": ("test", "review"),
     "lower-dose": ("lower", "review"),
     "start-ras-inhibitor": _START,

@@ -78,7 +78,7 @@ def check_harm(situation: Situation, course: DrugCourse) -> HarmCheck:
         found.reasons.append(
             Reason(
                 id=barrier.id,
-                words=barrier.words,
+                words=f"{barrier.words}{_dated((*evidence, *reacted))}",
                 severity="contraindicated",
                 action="stop",
                 evidence=evidence + reacted,
@@ -90,6 +90,11 @@ def check_harm(situation: Situation, course: DrugCourse) -> HarmCheck:
             _hold(situation, row, course, present, found)
     found.reasons.sort(key=lambda reason: (SEVERITIES.index(reason.severity), reason.action != "stop"))
     return found
+
+
+def _dated(facts: tuple[Evidence, ...]) -> str:
+    """When it was, of the first fact that says so."""
+    return next((f" ({fact.date})" for fact in facts if fact.date is not None), "")
 
 
 def would_meet(situation: Situation, drug: str, drug_class: str) -> tuple[str, ...]:

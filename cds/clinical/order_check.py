@@ -117,11 +117,19 @@ def _checked(
             if finding.outcome == "met" and (finding.rule, finding.about) in open_before and _cites(finding, source):
                 closes[finding.rule] = None
     if any(f.severity == "contraindicated" or (f.rule == LIMITS and f.severity == "major") for f in found):
-        found = [f for f in found if f.rule != TESTS]  # no tests for an order that should not be signed
+        # Neither tests nor another dose for an order that should not be signed.
+        found = [_without_proposals(f) for f in found if f.rule != TESTS]
         closes = {}
+    if any(f.rule == DOSE for f in found):
+        found = [f for f in found if f.rule != "lower-dose" or f.action != "review"]  # the same said twice
     drugs = tuple(dict.fromkeys(order.drug for order in orders))
     unique = {(f.rule, f.about, f.action): f for f in found}
     return CheckedOrder(source=source, drugs=drugs, findings=tuple(unique.values()), closes=tuple(closes))
+
+
+def _without_proposals(finding: Finding) -> Finding:
+    is_dose = finding.rule == DOSE and finding.action == "lower"
+    return replace(finding, drug_proposals=(), action="review" if is_dose else finding.action)
 
 
 def _was_open(finding: Finding, open_before: dict[tuple[str, str | None], Finding]) -> bool:

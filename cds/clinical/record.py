@@ -242,13 +242,17 @@ class TestOrder:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class OtherMedicine:
-    """A medicine that is no course: not systemic, or of no class we use. `reason` says which."""
+    """A medicine that is no course: not systemic, of no class we use, or not read. `reason` says which.
+
+    `is_unread` is True where nobody can say what it is: refused, or in no table.
+    """
 
     display: str
     reason: str
     source: str
     status: str
     dated: PartialDate | None = None
+    is_unread: bool = False
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

@@ -69,7 +69,7 @@ def _unstable_because(situation: Situation) -> str:
         if row.analyte is not None and row.sign is not None and row.value is not None and row.unit is not None:
             for reading in situation.readings(row.analyte):
                 if row.unit in reading.by_unit and reading.holds(row.sign, row.value, row.unit):
-                    return f"{situation.tables.analyte_names.get(row.analyte, row.analyte)} was {reading.shown}"
+                    return f"unstable: {value_in_words(reading, situation.tables)}"
         for problem in situation.record.problems:
             if problem.dated is None or frozenset(row.concepts).isdisjoint(problem.concepts):
                 continue

@@ -7,7 +7,8 @@ record. The result does not depend on the order of the resources.
 from __future__ import annotations
 
 from collections.abc import Callable, Iterable, Mapping
-from dataclasses import dataclass
+from contextlib import suppress
+from dataclasses import dataclass, replace
 from datetime import date, tzinfo
 from typing import Any, Protocol, TypeVar
 
@@ -18,6 +19,7 @@ from cds.fhir.allergies import read_allergy
 from cds.fhir.bundle import PatientResources, Resolve
 from cds.fhir.codes import CodeBook
 from cds.fhir.conditions import read_conditions
+from cds.fhir.dates import DateNotUnderstood, parse_date
 from cds.fhir.encounters import read_encounter
 from cds.fhir.intake import Context, Intake, NotRecognised
 from cds.fhir.medications import read_medication
@@ -29,6 +31,7 @@ from cds.fhir.stay_reasons import with_linked_reasons
 from cds.fhir.validate import refusal
 
 _MEDICATION_TYPES = ("MedicationRequest", "MedicationStatement", "MedicationDispense", "MedicationAdministration")
+_OVER = ("stopped", "completed", "cancelled", "entered-in-error", "not-taken", "not-done", "draft")
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -70,7 +73,37 @@ def build_record(
         return _built(patient, None, intake)
     context = Context(codes=codes, zone=zone, intake=intake, default_units=default_units or {})
     resources, resolve = _through_the_gate(patient, intake)
-    return _built(patient, _record(patient, resources, resolve, context), intake)
+    record = _record(patient, resources, resolve, context)
+    unread = _unread_medicines(patient, resources, context)
+    others = tuple(sorted((*record.other_medicines, *unread), key=lambda other: other.source))
+    return _built(patient, replace(record, other_medicines=others), intake)
+
+
+def _unread_medicines(
+    patient: PatientResources, accepted: Mapping[str, tuple[dict[str, Any], ...]], context: Context
+) -> list[OtherMedicine]:
+    """Medicines whose resource was refused: what they are nobody knows, but that they are there must be said."""
+    found = []
+    for kind in _MEDICATION_TYPES:
+        read = {id(resource) for resource in accepted.get(kind, ())}
+        for resource in patient.resources.get(kind, ()):
+            if id(resource) in read or resource.get("status") in _OVER:
+                continue
+            dated = None
+            with suppress(DateNotUnderstood):
+                dated = parse_date(resource.get("authoredOn"), context.zone)
+            source = f"{kind}/{resource['id']}"
+            found.append(
+                OtherMedicine(
+                    display="",
+                    reason="the resource was refused",
+                    source=source,
+                    status="unknown",
+                    dated=dated,
+                    is_unread=True,
+                )
+            )
+    return found
 
 
 def _record(

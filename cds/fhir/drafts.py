@@ -120,7 +120,7 @@ def _concept(code: OrderCode | None, text: str) -> dict[str, Any]:
 def _note(proposal: DrugProposal) -> str:
     note = _UNSIGNED
     if proposal.alternatives:
-        note += f" Sign only one of the alternatives; the others are {' and '.join(proposal.alternatives)}."
+        note += f" Sign only one of the alternatives; otherwise: {' or '.join(proposal.alternatives)}."
     return f"{note} {proposal.note[0].upper()}{proposal.note[1:]}." if proposal.note else note
 
 

@@ -93,6 +93,7 @@ def read_medication(
             source=source,
             status=status,
             dated=dates.authored if dates.authored is not None else dates.starts,
+            is_unread=reason == NOT_RECOGNISED,
         )
 
     if not medicine.components:

@@ -11,6 +11,7 @@ from flask import Blueprint, Response, g, request
 from cds import assessment
 from cds.cards.replies import Reply
 from cds.errors import Issue, NoPatientError, RequestError
+from cds.fhir.record_shape import issue_shape
 from cds.service.answers import as_json
 from cds.service.parts import Parts
 from cds.service.requests_in import by_reference, is_true, moment, read_body, refuse_unknown
@@ -72,7 +73,9 @@ def _bundle(parts: Parts) -> bytes:
         return data
     if parts.fetch is None:
         raise RequestError(400, "this service fetches from no FHIR server", "Send the Bundle itself")
-    return parts.fetch(*wanted)
+    data, skipped = parts.fetch(*wanted)
+    g.skipped = skipped
+    return data
 
 
 def _replies(parts: Parts) -> assessment.RepliesOf:
@@ -91,6 +94,15 @@ def _answer(parts: Parts, answer: dict[str, Any], key: str) -> Response:
     if not answer[key]:
         issues = tuple(Issue(**issue) for issue in answer["issues"])
         raise NoPatientError("the input holds no patient that can be assessed", _SEND_PATIENT, issues)
+    for kind in g.get("skipped", ()):
+        issue = Issue(
+            resource="input",
+            path="fhir_server",
+            problem=f"does not offer {kind}, so nothing of that type was read",
+            fix="Send the Bundle itself, or let the server offer the type",
+            severity="doubtful",
+        )
+        answer["issues"].append(issue_shape(issue))
     _count(answer, key)
     if parts.store is not None and key != "records":
         for one in answer[key]:

@@ -18,7 +18,9 @@ _ENCODINGS = frozenset({"", "identity", "gzip"})
 _LARGEST_REFERENCE_BYTES = 16 * 1024
 _BY_REFERENCE = ("fhir_server", "patient", "access_token")
 _SEND = "Send a FHIR R4 Bundle as application/fhir+json or application/json, gzip or not"
-Fetch = Callable[[str, str, str | None], bytes]
+Fetch = Callable[
+    [str, str, str | None], tuple[bytes, tuple[str, ...]]
+]  # the Bundle, and types the server does not offer
 
 
 def read_body(request: Request, limits: Limits, *, seconds: float) -> bytes:

@@ -21,6 +21,7 @@ import orjson
 from gunicorn.app.base import BaseApplication
 from gunicorn.glogging import Logger
 from gunicorn.http import errors
+from gunicorn.util import close_graceful
 from gunicorn.workers.gthread import ThreadWorker
 
 from cds.service import wiring
@@ -32,6 +33,7 @@ from cds.service.settings import Settings, describe
 THREADS = 8
 # Longer than proxies usually keep theirs (60 s, common practice), so that none sends on a connection closed under it.
 _KEEPALIVE_SECONDS = 65
+_LINGER_SECONDS = 1.0  # for a client to take an answer that came before it had sent all
 _LONGEST_LINE, _MOST_FIELDS, _LONGEST_FIELD = 2048, 64, 9216  # a token may have 8 KiB
 _SHARED_MEMORY = Path("/dev/shm")  # heartbeats there wait for no disk
 # Of what gunicorn cannot read.
@@ -142,10 +144,24 @@ class Worker(ThreadWorker):  # type: ignore[misc]  # the library ships no types
         self._read_by[conn] = time.monotonic() + self.app.settings.request_seconds
         super().enqueue_req(conn)
 
+    def handle(self, conn: Any) -> Any:
+        """Answer one request, in a thread. Closing is done here too: the main thread would wait for the client to agree."""
+        keep: Any = False
+        try:
+            keep = super().handle(conn)
+        finally:
+            if keep is False:
+                close_graceful(conn.sock, timeout=_LINGER_SECONDS)
+        return keep
+
     def finish_request(self, conn: Any, fs: Any) -> None:
-        """Take a connection back from its thread."""
+        """Take a connection back from its thread, to wait for its next request if it is still open."""
         self._read_by.pop(conn, None)
-        super().finish_request(conn, fs)
+        if fs.cancelled() or fs.exception() is not None or fs.result() is False:
+            self.nr_conns -= 1
+            conn.close()
+        else:
+            super().finish_request(conn, fs)
 
     def murder_pending(self) -> None:
         """Close connections on which nothing came; called at least once a second, also while stopping."""

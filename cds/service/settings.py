@@ -1,4 +1,4 @@
-"""What a deployment may choose, read once from `GDMT_CARDS_*` variables. No other module reads the environment.
+"""What a deployment may choose, read once from `GDMT_CARDS_*` variables. No other module of the service reads the environment.
 
 An empty variable counts as not set. No message repeats a value: a secret may stand in the wrong variable.
 """

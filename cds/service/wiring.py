@@ -115,7 +115,7 @@ def _rules(settings: Settings) -> FetchRules:
 def _fetch(settings: Settings, log: Log) -> Fetch:
     rules = _rules(settings)
 
-    def fetch(server: str, patient: str, token: str | None) -> bytes:
+    def fetch(server: str, patient: str, token: str | None) -> tuple[bytes, tuple[str, ...]]:
         result = fetch_patient(
             Wanted(server, patient, token),
             rules,
@@ -125,7 +125,7 @@ def _fetch(settings: Settings, log: Log) -> Fetch:
         )
         if result.skipped:
             log.warning("types_not_offered", types=result.skipped)
-        return result.bundle
+        return result.bundle, result.skipped
 
     return fetch
 

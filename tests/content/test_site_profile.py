@@ -6,6 +6,7 @@ Profiles and patients are invented. A schedule, limit or tier written here shows
 from __future__ import annotations
 
 import json
+import tomllib
 from dataclasses import replace
 from datetime import UTC
 from functools import cache
@@ -14,7 +15,7 @@ from typing import Any
 
 import orjson
 import pytest
-from asking import card, finding, order_check_of, said
+from asking import card, finding, said
 from builders import (
     ATC,
     LOINC,
@@ -29,21 +30,25 @@ from builders import (
     potassium,
     pressure,
     problem,
-    subject,
+    sodium,
 )
+from expectations import AS_OF, PATIENTS
 from jsonschema import Draft202012Validator
-from random_patients import written_patients
 from referencing import Registry, Resource
 
 from cds.assessment import assess, check_orders, describe_records
-from cds.content import load
+from cds.cards.card import LONGEST_HEADLINE, TIERS
+from cds.clinical.evaluate import evaluate
 from cds.content.catalogue import catalogue
 from cds.content.load import Content, load_content
 from cds.content.published import published
 from cds.content.site import SCHEMA, SiteProfile, SiteProfileError, as_json, read_site
 from cds.content.site_overlay import with_site
 from cds.errors import CdsError
+from cds.fhir.build_record import build_record
+from cds.fhir.bundle import split_by_patient
 from cds.fhir.dates import parse_as_of
+from cds.fhir.reading import COMMAND_LINE_LIMITS, read_json
 
 CONTENT = load_content()
 TARNWICK = Path(__file__).parents[2] / "fixtures" / "site" / "tarnwick.toml"
@@ -155,7 +160,7 @@ def test_a_standard_code_the_content_does_not_know_may_be_given_under_any_addres
 def in_house_potassium(value: float, *, unit: str | None) -> dict[str, Any]:
     code = {"coding": [{"system": LABORATORY, "code": "KPL"}]}
     quantity = {"value": value, **({"unit": unit} if unit else {})}
-    return potassium(value, DAY, code=code, valueQuantity=quantity)
+    return {**potassium(value, DAY), "code": code, "valueQuantity": quantity}
 
 
 ANALYTE = f'[[code.analyte]]\nsystem = "{LABORATORY}"\ncode = "KPL"\nanalyte = "potassium"\n'
@@ -283,7 +288,7 @@ def test_a_tier_of_the_site_decides_where_a_card_stands():
 
 def test_the_tier_of_a_severity_is_for_the_site_to_choose():
     content = content_of('[tiers]\n"severity.caution" = "plan"\n')
-    resources = patient(), problem("heart failure", "2024-01-10"), potassium(5.2, DAY)
+    resources = patient(), problem("heart failure", "2024-01-10"), sodium(133, DAY)
     assert card(assessed(CONTENT, *resources), "lab-out-of-range")["tier"] == "note"
     assert card(assessed(content, *resources), "lab-out-of-range")["tier"] == "plan"
 
@@ -314,7 +319,9 @@ def test_a_sign_off_takes_the_unsigned_notice_off_every_card(when):
             assert any("by Dr Ilse Marrow on 2026-12-01" in caution for caution in shown["cautions"]) is is_signed
     whole = assess(bundle(*without_an_mra(4.5)), content, as_of=parse_as_of(TODAY, UTC))
     assert whole["content"]["signed_off"] == "Dr Ilse Marrow, 2026-12-01"
-    assert whole["content"]["notice"].endswith("Advice for licensed clinicians; local policy and the prescriber decide.")
+    assert whole["content"]["notice"].endswith(
+        "Advice for licensed clinicians; local policy and the prescriber decide."
+    )
 
 
 def test_a_profile_without_a_sign_off_leaves_the_content_unsigned():
@@ -345,9 +352,14 @@ def test_the_catalogue_prints_the_numbers_of_the_site():
 def test_an_order_is_checked_with_the_limits_of_the_site():
     content = content_of("[limits]\nmra-potassium-block = 4.8\n")
     resources = [*without_an_mra(4.9), order("spironolactone", 25, since=TODAY, status="draft")]
-    whole = check_orders(bundle(*resources), content, as_of=parse_as_of(TODAY, UTC))
-    (mine,), (others,) = (one["orders"] for one in (whole["checks"][0], order_check_of(*resources, as_of=TODAY)))
-    assert (mine["verdict"], others["verdict"]) == ("cards", "closes")
+    stood_against = []
+    for one in (CONTENT, content):
+        (check,) = check_orders(bundle(*resources), one, as_of=parse_as_of(TODAY, UTC))["checks"]
+        stood_against.append(
+            [c["headline"] for order in check["orders"] for c in order["cards"] if "4.9" in c["headline"]]
+        )
+    assert stood_against[0] == []
+    assert len(stood_against[1]) == 1
 
 
 # The example, which uses everything.
@@ -370,10 +382,11 @@ def test_what_is_printed_under_the_example_profile_keeps_to_the_published_schema
     one, other = (with_site(CONTENT, read_site(TARNWICK.read_bytes(), name="t")) for _ in range(2))
     schema = json.loads(published("schemas/assessment.schema.json"))
     check = Draft202012Validator(schema, registry=registry())
-    for name, (data, day) in written_patients().items():
-        answers = [orjson.dumps(assess(data, content, as_of=parse_as_of(day, UTC))) for content in (one, other)]
-        assert answers[0] == answers[1], name
-        assert [error.message for error in check.iter_errors(orjson.loads(answers[0]))] == [], name
+    for folder in sorted(PATIENTS.iterdir()):
+        data, moment = (folder / "bundle.json").read_bytes(), parse_as_of(AS_OF, UTC)
+        answers = [orjson.dumps(assess(data, content, as_of=moment)) for content in (one, other)]
+        assert answers[0] == answers[1], folder.name
+        assert [error.message for error in check.iter_errors(orjson.loads(answers[0]))] == [], folder.name
 
 
 def test_the_content_itself_is_left_as_it_was():
@@ -396,16 +409,353 @@ def test_a_second_profile_is_not_laid_over_the_first():
         with_site(content_of(""), profile(""))
 
 
-# What stands for the severity table: rules whose tier a profile cannot set by answer.
+# What may not be.
 
 
-def test_every_open_answer_of_a_rule_whose_tier_a_profile_cannot_set_has_a_severity():
-    from cds.content.site_overlay import _BY_SEVERITY
+@pytest.mark.parametrize("rule", ["stop-harmful-drug", "interaction", "lab-out-of-range", "lower-dose"])
+def test_every_open_answer_has_a_severity_where_a_profile_cannot_set_the_tier_by_rule(rule):
+    answers = {answer for known, answer in CONTENT.wording.cards if known == rule and answer != "unknown"}
+    for answer in answers:
+        with pytest.raises(SiteProfileError, match="comes from its severity"):
+            content_of(f'[tiers]\n"{rule}.{answer}" = "danger"\n')
+    for folder in PATIENTS.iterdir():
+        split = split_by_patient(
+            read_json((folder / "bundle.json").read_bytes(), COMMAND_LINE_LIMITS), COMMAND_LINE_LIMITS
+        )
+        for one in split.patients:
+            record = build_record(one, CONTENT.codes, UTC).record
+            found = evaluate(record, CONTENT.tables, as_of=parse_as_of(AS_OF, UTC)) if record is not None else ()
+            assert all(f.severity for f in found if f.rule == rule and f.outcome == "open"), folder.name
 
-    graded: dict[str, set[bool]] = {}
-    for data, day in written_patients().values():
-        for one in assess(data, CONTENT, as_of=parse_as_of(day, UTC), trace=True)["assessments"]:
-            tiers = set(CONTENT.wording.tier_of_severity.values())
-            for shown in one["cards"]:
-                graded.setdefault(shown["rule"], set()).add(shown["tier"] in tiers)
-    assert graded.keys() & _BY_SEVERITY
+
+# A profile that departs from the schema: what is written, the key that is named, what is wrong, the way out.
+AGAINST_THE_SCHEMA = [
+    ("[sit]", "sit", "is no key we know", "Did you mean 'site'?"),
+    ("[site]", "site.name", "is missing", "The name of the health system"),
+    ("[site]\nname = 7", "site.name", "must be a text", "one line"),
+    ("[site]\nname = ''", "site.name", "is empty", "one line"),
+    ('[site]\nname = "two\\nlines"', "site.name", "is not in the form expected", "one line"),
+    (f"[site]\nname = '{'x' * 101}'", "site.name", "is longer than 100 characters", "Correct it."),
+    (f"{HEAD}zon = 'UTC'", "site.zon", "is no key we know", "Did you mean 'zone'?"),
+    ("site = 'Tarnwick'", "site", "must be a table", "name and version"),
+    ("[site]\nversion = 'a b'", "site.version", "is not in the form expected", "no spaces"),
+    (
+        f"{HEAD}rules_off = ['interaction']",
+        "site.rules_off",
+        "TOML counts it to the table site",
+        "at the top of the file",
+    ),
+    (f"{HEAD}[limits]\nrules_off = []", "limits.rules_off", "TOML counts it to the table limits", "at the top"),
+    (f"rules_off = 'interaction'\n{HEAD}", "rules_off", "must be a list", "ids of rules"),
+    (f"rules_off = ['interaction', 'interaction']\n{HEAD}", "rules_off", "names one of its items twice", "Correct it."),
+    (f"rules_off = [1]\n{HEAD}", "rules_off[0]", "must be a text", "`gdmt-cards rules` lists"),
+    (f"{HEAD}[code.drug]\nsystem = 'x'", "code.drug", "must be a list", "[[code.drug]]"),
+    (f"{HEAD}[[code.drug]]\ncode = '1'\ndrug = 'x'", "code.drug[0].system", "is missing", "exactly as the site's data"),
+    (f"{HEAD}[[code.drug]]\nsystem = 'x'\ncode = 417\ndrug = 'x'", "code.drug[0].code", "must be a text", "in quotes"),
+    (f"{HEAD}[[code.drug]]\nsystem = 'x'\ncode = ' 1'\ndrug = 'x'", "code.drug[0].code", "the form", "without spaces"),
+    (f"{HEAD}[[code.drug]]\nsystem = 'x'\ncode = '1'", "code.drug[0]", "has neither drug nor parts", "parts in place"),
+    (
+        HEAD + drug("drug = 'x'\nparts = [{drug = 'y'}, {drug = 'z'}]"),
+        "code.drug[0]",
+        "has both drug and parts",
+        "parts",
+    ),
+    (
+        HEAD + drug("strength_mg = 5\nparts = [{drug = 'y'}, {drug = 'z'}]"),
+        "code.drug[0]",
+        "has strength_mg or class beside parts",
+        "the part it belongs to",
+    ),
+    (HEAD + drug("parts = [{drug = 'y'}]"), "code.drug[0].parts", "has fewer than 2 items", "two to six"),
+    (HEAD + drug("drug = 'x'\nstrength_mg = '25 mg'"), "code.drug[0].strength_mg", "must be a number", "Milligrams"),
+    (HEAD + drug("drug = 'x'\nstrength_mg = 0"), "code.drug[0].strength_mg", "is too small", "Milligrams"),
+    (HEAD + drug("drug = 'x'\nstrenght_mg = 25"), "code.drug[0].strenght_mg", "is no key we know", "'strength_mg'?"),
+    (f"{HEAD}[[code.analyte]]\nsystem = 'x'\ncode = 'K'", "code.analyte[0].analyte", "is missing", "What is measured"),
+    (f"{HEAD}[units]\npotassium = 1", "units.potassium", "must be a text", "UCUM"),
+    (f"{HEAD}[units]\nPotassium = 'mmol/L'", "units.Potassium", "is not in the form expected", "An analyte"),
+    (
+        f"{HEAD}[limits]\nmra-potassium-block = '4.8'",
+        "limits.mra-potassium-block",
+        "a number or a table",
+        "unit of the row",
+    ),
+    (f"{HEAD}[limits]\nmra-potassium-block = -1", "limits.mra-potassium-block", "is too small", "unit of the row"),
+    (f"{HEAD}[limits]\nmra-potassium-block = inf", "limits.mra-potassium-block", "is too large", "unit of the row"),
+    (f"{HEAD}[limits]\nmra-x = {{ reason = 'y' }}", "limits.mra-x.value", "is missing", "A number"),
+    (f"{HEAD}[limits]\nmra-x = {{ value = 4, reasons = 'y' }}", "limits.mra-x.reasons", "no key we know", "'reason'?"),
+    (
+        f"{HEAD}[limits]\nmra-x = {{ value = 4, reason = '' }}",
+        "limits.mra-x.reason",
+        "is empty",
+        "Why the site departs",
+    ),
+    (f"{HEAD}[schedule]\nmra-steady = 91", "schedule.mra-steady", "must be a table", "due_after_days"),
+    (f"{HEAD}[schedule]\nmra-steady = {{}}", "schedule.mra-steady", "changes nothing", "at least one of"),
+    (
+        f"{HEAD}[schedule]\nmra-steady = {{ grace_days = 1.5 }}",
+        "schedule.mra-steady.grace_days",
+        "a whole number",
+        "days",
+    ),
+    (
+        f"{HEAD}[schedule]\nmra-steady = {{ grace_days = -1 }}",
+        "schedule.mra-steady.grace_days",
+        "is too small",
+        "from 0",
+    ),
+    (f"{HEAD}[schedule]\nmra-steady = {{ due = 9 }}", "schedule.mra-steady.due", "is no key we know", "due_after_days"),
+    (f"{HEAD}[tiers]\n'start-mra.start' = 'dangr'", 'tiers."start-mra.start"', "must be one of danger", "'danger'?"),
+    (f"{HEAD}[tiers]\nstart-mra.start = 'act'", "tiers.start-mra", "is a table", 'in quotes: "start-mra.start"'),
+    (f"{HEAD}[headlines]\n'start-mra.start' = ''", 'headlines."start-mra.start"', "is empty", "One line"),
+    (
+        f"{HEAD}[headlines]\n'start-mra.start' = 'Start {{patient}}'",
+        'headlines."start-mra.start"',
+        "the form",
+        "{drug}",
+    ),
+    (f"{HEAD}[headlines]\n'start-mra.start' = '{{drug.x}}'", 'headlines."start-mra.start"', "the form", "{drug}"),
+    (f"{HEAD}[headlines]\n'start-mra.start' = 'Start {{drug'", 'headlines."start-mra.start"', "the form", "{drug}"),
+    (f"{HEAD}[headlines]\n'a.b' = '{'x' * 121}'", 'headlines."a.b"', "is longer than 120 characters", "One line"),
+    (f"{HEAD}[cautions]\nstart-mra = '   '", "cautions.start-mra", "is not in the form expected", "One line"),
+    (f"{HEAD}[sign_off]\nwho = 'Dr Marrow'", "sign_off.when", "is missing", "A date"),
+    (f"{HEAD}[sign_off]\nwhen = 2026-12-01T09:00:00", "sign_off.when", "is no date of the calendar", "A date"),
+    (f"{HEAD}[sign_off]\nwhen = '2026-02-30'", "sign_off.when", "is no date of the calendar", "2026-11-20"),
+    (f"{HEAD}[sign_off]\ncontent_version = 2026.1", "sign_off.content_version", "must be a text", "in quotes"),
+]
+# A profile in good form, about something that does not exist or may not be.
+AGAINST_THE_CONTENT = [
+    ("region = 'uk'", "site.region", "'uk' is no region of the content", "Known are esc, us"),
+    ("zone = 'America/Chicgo'", "site.zone", "is no time zone", "IANA"),
+    ("zone = '../etc/passwd'", "site.zone", "is no time zone", "IANA"),
+    (drug("drug = 'spironolacton'"), "code.drug[0].drug", "no single drug the content knows", "mean 'spironolactone'?"),
+    (drug("drug = 'torsemide'"), "code.drug[0].drug", "no single drug", "Here it is called 'torasemide'."),
+    (drug("drug = 'Eplerenone'"), "code.drug[0].drug", "no single drug", "Here it is called 'eplerenone'."),
+    (drug("drug = 'lisinopril/hydrochlorothiazide'"), "code.drug[0].drug", "no single drug", "give them as parts"),
+    (
+        drug("drug = 'eplerenone'\nclass = 'arb'"),
+        "code.drug[0].class",
+        "'arb' is not the class of eplerenone: to the content it is of the class 'mra'",
+        "leave class out",
+    ),
+    (
+        drug("drug = 'eplerenone'\nclass = 'steroids'"),
+        "code.drug[0].class",
+        "'steroids' is not the class",
+        "leave class out",
+    ),
+    (drug("drug = 'eplerenone'\nstrength_mg = nan"), "code.drug[0].strength_mg", "no strength", "one tablet"),
+    (
+        drug("drug = 'sacubitril/valsartan'\nstrength_mg = 97"),
+        "code.drug[0].strength_mg",
+        "is no strength of sacubitril/valsartan",
+        "both parts together: 50, 100, 200",
+    ),
+    (
+        drug("parts = [{drug = 'lisinopril'}, {drug = 'lisinopril'}]"),
+        "code.drug[0].parts",
+        "names a drug twice",
+        "each ingredient once",
+    ),
+    (
+        drug("parts = [{drug = 'lisinopril'}, {drug = 'hctz'}]"),
+        "code.drug[0].parts[1].drug",
+        "'hctz' is no single drug",
+        "non-proprietary name",
+    ),
+    (drug("drug = 'eplerenone'") + drug("drug = 'lisinopril'"), "code.drug[1]", "a second meaning", "Keep one"),
+    (
+        f"[[code.drug]]\nsystem = '{ATC}'\ncode = 'C09AA02'\ndrug = 'eplerenone'",
+        "code.drug[0]",
+        "a code the content already knows",
+        "Remove it",
+    ),
+    (
+        f"[[code.analyte]]\nsystem = '{LOINC}'\ncode = '2823-3'\nanalyte = 'sodium'",
+        "code.analyte[0]",
+        "a code the content already knows",
+        "Remove it",
+    ),
+    (ANALYTE + ANALYTE, "code.analyte[1]", "a second meaning", "Keep one"),
+    (
+        ANALYTE.replace('"potassium"', '"potasium"'),
+        "code.analyte[0].analyte",
+        "nothing the content measures",
+        "'potassium'?",
+    ),
+    ("[units]\npotasium = 'mmol/L'", "units.potasium", "nothing the content measures", "Did you mean 'potassium'?"),
+    ("[units]\npotassium = 'mmol/l'", "units.potassium", "'mmol/l' is no unit of potassium", "Did you mean 'mmol/L'?"),
+    ("[limits]\nmra-potassium-blok = 4", "limits.mra-potassium-blok", "no limit of the id", "'mra-potassium-block'?"),
+    (
+        "[limits]\nmra-potassium-block = 5.1",
+        "limits.mra-potassium-block",
+        "is less safe than > 5 mmol/L",
+        'reason = "..."',
+    ),
+    ("[limits]\nmra-egfr-block = 25", "limits.mra-egfr-block", "is less safe than <= 30", 'reason = "..."'),
+    ("[limits]\nmra-potassium-stop = 6.1", "limits.mra-potassium-stop", "is less safe than >= 6", 'reason = "..."'),
+    ("[limits]\nsodium-low = 130", "limits.sodium-low", "is less safe than < 135", 'reason = "..."'),
+    (
+        "[limits]\nmra-creatinine-lower = 2.5",
+        "limits.mra-creatinine-lower",
+        "is no value of creatinine that a patient can have, in umol/L",
+        "The content has 221 umol/L; give the new number in the same unit.",
+    ),
+    ("[limits]\nmra-potassium-block = nan", "limits.mra-potassium-block", "is no value of potassium", "same unit"),
+    (
+        "[limits]\npotassium-emergency = 6.2",
+        "limits.potassium-emergency",
+        "would contradict the caution that goes with it",
+        "Write a caution of the site",
+    ),
+    (
+        '[limits]\nmra-potassium-block = 4.8\n"limit.mra-potassium-block" = 4.7',
+        'limits."limit.mra-potassium-block"',
+        "another key changes too",
+        "Keep one",
+    ),
+    (
+        '[limits]\n"out_of_range.mra-potassium-block" = 4.8',
+        'limits."out_of_range.mra-potassium-block"',
+        "no limit of the id",
+        "`gdmt-cards rules` lists",
+    ),
+    (
+        "[schedule]\nmra-stead = { grace_days = 9 }",
+        "schedule.mra-stead",
+        "no timed check",
+        "Did you mean 'mra-steady'?",
+    ),
+    (
+        "[schedule]\nmra-steady = { due_after_days = 91 }",
+        "schedule.mra-steady",
+        "would open on day 150, after it is due on day 91",
+        "that fit together",
+    ),
+    ("[tiers]\n'start-mra.stat' = 'act'", 'tiers."start-mra.stat"', "no card has the words", "'start-mra.start'?"),
+    ("[tiers]\n'severity.mayor' = 'act'", 'tiers."severity.mayor"', "no card has the words", "'severity.major'?"),
+    (
+        "[tiers]\n'severity.contraindicated' = 'act'",
+        'tiers."severity.contraindicated"',
+        "less than a danger",
+        "Remove it",
+    ),
+    ("[tiers]\n'interaction.stop' = 'note'", 'tiers."interaction.stop"', "changes nothing", '"severity.major"'),
+    (
+        "[headlines]\n'start-mar.start' = 'x'",
+        'headlines."start-mar.start"',
+        "no card has the words",
+        "'start-mra.start'?",
+    ),
+    ("[cautions]\nstart-mar = 'x'", "cautions.start-mar", "no caution of the key", "Did you mean 'start-mra'?"),
+    (
+        SIGN_OFF.format(when="2025-11-01", version="2025.11.0"),
+        "sign_off.content_version",
+        f"the sign-off is for content 2025.11.0, but the content is {CONTENT.version}",
+        "or remove [sign_off]",
+    ),
+]
+
+
+def refused(text: str) -> SiteProfileError:
+    """What reading these bytes, or laying them over the content, is refused with."""
+    with pytest.raises(SiteProfileError) as caught:
+        with_site(CONTENT, read_site(text.encode(), name="profile.toml"))
+    return caught.value
+
+
+def schema_faults(text: str) -> list[str]:
+    """What any validator would say of the published schema and the parsed profile."""
+    checker = Draft202012Validator.FORMAT_CHECKER
+    schema = Draft202012Validator(json.loads(published(SCHEMA)), format_checker=checker)
+    return [error.message for error in schema.iter_errors(as_json(tomllib.loads(text)))]
+
+
+@pytest.mark.parametrize(("text", "key", "problem", "fix"), AGAINST_THE_SCHEMA)
+def test_a_departure_from_the_schema_is_refused_with_its_key_and_the_way_out(text, key, problem, fix):
+    told = {one.key: one for one in refused(text).problems}
+    assert problem in told[key].problem
+    assert fix in told[key].fix
+    assert schema_faults(text)
+
+
+@pytest.mark.parametrize(("text", "key", "problem", "fix"), AGAINST_THE_CONTENT)
+def test_what_only_the_content_can_tell_is_refused_with_its_key_and_the_way_out(text, key, problem, fix):
+    error = refused(HEAD + text)
+    (told,) = error.problems
+    assert told.key == key
+    assert problem in told.problem
+    assert fix in told.fix
+    assert schema_faults(HEAD + text) == []
+    assert str(error) == f"profile.toml: {told.key}: {told.problem}.\n{told.fix}"
+
+
+def test_a_rule_that_does_not_exist_cannot_be_switched_off():
+    (told,) = refused(f"rules_off = ['interaction', 'start-mar']\n{HEAD}").problems
+    assert (told.key, told.problem) == ("rules_off[1]", "there is no rule 'start-mar'")
+    assert told.fix.endswith("Did you mean 'start-mra'?")
+
+
+def test_an_id_of_two_limits_is_refused_until_the_table_is_named():
+    """The limits of a start and under treatment may share an id: each can be meant alone."""
+    row = replace(CONTENT.tables.safety.treatment_limits[0], id="mra-potassium-block")
+    safety = replace(CONTENT.tables.safety, treatment_limits=(row,))
+    content = replace(CONTENT, tables=replace(CONTENT.tables, safety=safety))
+    with pytest.raises(SiteProfileError, match=r'Write "limit\.mra-potassium-block" or "treatment_limit\.mra-p'):
+        with_site(content, profile("[limits]\nmra-potassium-block = 4.8\n"))
+    made = with_site(content, profile('[limits]\n"treatment_limit.mra-potassium-block" = 5.9\n')).tables
+    assert made.limits == content.tables.limits
+    assert made.safety.treatment_limits[0].value == 5.9
+
+
+@pytest.mark.parametrize(
+    ("data", "line", "problem"),
+    [
+        (b"[site]\nname = Tarnwick\n", "line 2", "is not TOML: "),
+        (b'[site]\nname = "a"\nname = "b"\n', "line 3", "is not TOML: "),
+        (b'[site]\n\nname = "a', "line 3", "is not TOML: "),
+        (b'[site]\nname = "T\xe9"\n', "line 2", "is not UTF-8 text"),
+        (b"x = " + b"[" * 100_000, "the whole profile", "nests its lists or tables too deeply"),
+    ],
+)
+def test_what_is_no_toml_is_refused_with_its_line(data, line, problem):
+    with pytest.raises(SiteProfileError) as caught:
+        read_site(data, name="profile.toml")
+    (told,) = caught.value.problems
+    assert told.key == line
+    assert told.problem.startswith(problem)
+    assert str(caught.value).startswith(f"profile.toml: {line}: ")
+
+
+def test_a_file_of_an_editor_that_writes_a_byte_order_mark_and_carriage_returns_is_read():
+    assert read_site(b"\xef\xbb\xbf" + HEAD.replace("\n", "\r\n").encode(), name="profile.toml").version == "7"
+
+
+def test_all_that_is_wrong_is_told_at_once_but_never_without_end():
+    many = "".join(f"{HEAD}[limits]\n" if n == 0 else f"x-{n} = '?'\n" for n in range(31))
+    error = refused(many)
+    assert len(error.problems) == 30
+    assert str(error).endswith("profile.toml: and 10 more problems.")
+
+
+def test_a_profile_that_cannot_be_used_is_an_error_of_ours_with_an_exit_code_of_its_own():
+    error = refused("[site]")
+    assert isinstance(error, CdsError)
+    assert (error.exit_code, error.http_status) == (22, 500)
+
+
+def test_the_schema_knows_the_same_tiers_and_headline_fields_as_the_content():
+    schema = json.loads(published(SCHEMA))["properties"]
+    assert tuple(schema["tiers"]["additionalProperties"]["enum"]) == TIERS
+    assert schema["headlines"]["additionalProperties"]["maxLength"] == LONGEST_HEADLINE
+    for words in CONTENT.wording.cards.values():
+        assert schema_faults(f"{HEAD}[headlines]\n'a.b' = {json.dumps(words.headline)}\n") == []
+
+
+def test_every_id_of_the_content_can_be_written_in_a_profile():
+    tables = CONTENT.tables
+    limits = (*tables.limits, *tables.safety.treatment_limits, *tables.safety.out_of_range)
+    lines = [HEAD, "[limits]", *(f"{key} = 1" for key in dict.fromkeys(row.id for row in limits))]
+    lines += ["[schedule]", *(f"{row.id} = {{ grace_days = 1 }}" for row in tables.checks)]
+    lines += ["[cautions]", *(f"{key} = 'x'" for key in CONTENT.wording.cautions)]
+    lines += ["[tiers]", *(f"'{rule}.{answer}' = 'act'" for rule, answer in CONTENT.wording.cards)]
+    assert schema_faults("\n".join(lines)) == []

@@ -173,13 +173,14 @@ def test_a_patient_may_be_named_instead_of_sent():
 
     def fetch(server, who, token):
         asked.append((server, who, token))
-        return NEW_PATIENT
+        return NEW_PATIENT, ("AllergyIntolerance",)
 
     client = Client(parts(fetch=fetch))
     body = {"fhir_server": "https://fhir.example/r4", "patient": "p1", "access_token": "secret"}
     answer = client.post("/v1/assessments", json.dumps(body).encode(), content_type="application/json")
     assert answer.status_code == 200
     assert asked == [("https://fhir.example/r4", "p1", "secret")]
+    assert "AllergyIntolerance" in answer.json["issues"][0]["problem"]
 
 
 def test_naming_a_patient_needs_a_service_that_fetches(client):

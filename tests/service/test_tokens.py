@@ -349,17 +349,16 @@ def test_an_attack_is_refused_with_the_one_answer_that_says_nothing_more(gate, r
     assert reasons == [reason]
 
 
-def over_http(gate, text, path="/v1/rules", method="GET"):
-    headers = {} if text is None else {"Authorization": bearer(text)}
-    return Client(parts(callers=gate)).open(method, path, headers=headers)
+def asked(client, text, path="/v1/rules", method="GET"):
+    return client.open(method, path, headers={} if text is None else {"Authorization": bearer(text)})
 
 
 def test_over_http_every_attack_gets_the_same_answer_but_for_its_request_id(gate):
-    answers = set()
+    client, answers = Client(parts(callers=gate)), set()
     for attack, (_, build) in ATTACKS.items():
         text = build()
         if attack not in ("a line end", "letters beyond ASCII"):  # a client cannot send these in a header
-            answer = over_http(gate, text)
+            answer = asked(client, text)
             told = {**answer.json, "instance": ""}
             answers.add((answer.status_code, answer.headers["WWW-Authenticate"], json.dumps(told)))
     ((status, header, body),) = answers
@@ -368,23 +367,25 @@ def test_over_http_every_attack_gets_the_same_answer_but_for_its_request_id(gate
 
 
 def test_over_http_a_token_is_asked_for_and_its_scope_decides(gate):
-    nobody = over_http(gate, None)
+    client = Client(parts(callers=gate))
+    nobody = asked(client, None)
     assert (nobody.status_code, nobody.headers["WWW-Authenticate"]) == (401, "Bearer")
-    too_little = over_http(gate, token())
+    too_little = asked(client, token())
     assert (too_little.status_code, too_little.json["fix"]) == (403, "Ask the issuer for a token with the scope rules.")
     assert 'scope="rules"' in too_little.headers["WWW-Authenticate"]
-    assert over_http(gate, token(without(scope="rules"))).status_code == 200
+    assert asked(client, token(without(scope="rules"))).status_code == 200
 
 
 def test_over_http_keys_that_cannot_be_had_are_no_fault_of_the_token(far_gate, issuer):
     issuer.fails = True
-    answer = over_http(far_gate, token())
+    answer = asked(Client(parts(callers=far_gate)), token())
     assert (answer.status_code, answer.headers["Retry-After"]) == (503, "60")
 
 
 def test_only_liveness_readiness_and_the_document_are_open(gate):
+    client = Client(parts(callers=gate))
     for path, status in (("/healthz", 200), ("/readyz", 200), ("/openapi.json", 200), ("/metrics", 401)):
-        assert over_http(gate, None, path).status_code == status
+        assert asked(client, None, path).status_code == status
     closed = [
         (method.upper(), path.replace("{card_id}", "0" * 24).replace("{id}", "p1").replace("{rule}", "start-mra"))
         for path, methods in DOCUMENT["paths"].items()
@@ -393,7 +394,7 @@ def test_only_liveness_readiness_and_the_document_are_open(gate):
     ]
     assert len(closed) >= 7
     for method, path in closed:
-        assert over_http(gate, None, path, method).status_code == 401, path
+        assert asked(client, None, path, method).status_code == 401, path
 
 
 EDGES = [

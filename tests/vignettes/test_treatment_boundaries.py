@@ -136,12 +136,12 @@ PAIRS = [
     *renal_and_potassium_pairs("ace-inhibitor-arb", RAMIPRIL),
     *renal_and_potassium_pairs("ace-inhibitor-arb", LOSARTAN),
     *renal_and_potassium_pairs("arni", ARNI),
-    ("arni-potassium-review", ARNI, k(5.4), k(5.41)),  # sacubitril/valsartan label (EU text): above 5.4
+    ("arni-potassium-treatment-review", ARNI, k(5.4), k(5.41)),  # sacubitril/valsartan label (EU text): above 5.4
     # STRONG-HF safety indicators: heart rate below 55, systolic pressure below 95
     ("beta-blocker-heart-rate-no-raise", BISOPROLOL, rate(55), rate(54)),
     ("beta-blocker-systolic-no-raise", BISOPROLOL, systolic(95), systolic(94)),
     # heart-failure practice tables (Postgrad Med J): below 50; without symptoms a review by policy, twice: lower
-    ("beta-blocker-heart-rate-review", BISOPROLOL, rate(50), rate(49)),
+    ("beta-blocker-heart-rate-treatment-review", BISOPROLOL, rate(50), rate(49)),
     ("beta-blocker-heart-rate-lower", BISOPROLOL, rate(49, 50), rate(49, 49)),
     ("carvedilol-heart-rate-review", CARVEDILOL, rate(55), rate(54)),  # label of carvedilol: below 55
 ]

@@ -190,6 +190,8 @@ def _open(
     judgements: list[Judgement],
     chosen: list[Judgement],
 ) -> Finding:
+    if absence.wrong:  # the same drug in its other salt comes first
+        chosen = sorted(chosen, key=lambda j: not _same_ingredient(j.drug, absence.wrong[0]))
     action = _action(situation, absence, chosen)
     weigh = _nothing_against(chosen[0]) if chosen[0].answer == "start" else _to_weigh(chosen[0])
     if absence.indication.action == "review":
@@ -197,6 +199,10 @@ def _open(
         weigh += f" The recommendation is a weak one (class {grade}), so this is a matter for review."
     meets = "".join(f" {said}" for said in would_meet(situation, chosen[0].drug, chosen[0].drug_class))
     because = f"{_intro(situation, pillar, absence.wrong, absence.members)} {weigh}{meets}{_others(judgements, chosen)}"
+    refused = [m for m in situation.record.other_medicines if m.is_unread and m.status == "unknown"]
+    if refused:
+        count = "One medicine" if len(refused) == 1 else f"{len(refused)} medicines"
+        because += f" {count} of the list could not be read: make sure that it is not there already."
     wrong = tuple(course_evidence(course, "limits") for course in absence.wrong)
     return Finding(
         rule=rule,
@@ -204,15 +210,21 @@ def _open(
         outcome="open",
         action=action,
         because=because,
-        evidence=_unique((*wrong, *situation.phenotype.evidence, *chosen[0].evidence)),
+        evidence=_unique((*wrong, *situation.phenotype.evidence, *_symptoms(situation, absence), *chosen[0].evidence)),
         recommendations=tuple(dict.fromkeys(absence.recommendation_for(j.drug) for j in chosen)),
         limits=tuple(dict.fromkeys(limit for j in judgements for limit in j.limits)),
         drug_proposals=_proposals(situation, chosen, absence.wrong, action),
         test_proposals=follow_up_tests(situation, chosen[0].drug_class, after="start") if action == "start" else (),
         opened_by=(*absence.opened_by, *(course.source for course in absence.wrong)),
-        cautions=tuple(dict.fromkeys(f"start-{j.drug_class}" for j in chosen)),
+        cautions=tuple(dict.fromkeys(f"{'switch' if action == 'switch' else 'start'}-{j.drug_class}" for j in chosen)),
         severity="caution" if absence.indication.action == "review" else None,
     )
+
+
+def _symptoms(situation: Situation, absence: _Absence) -> tuple[Evidence, ...]:
+    """The NYHA class, where the recommendation depends on it."""
+    nyha = situation.nyha()
+    return (nyha.evidence("supports"),) if nyha is not None and absence.indication.needs_nyha else ()
 
 
 def _action(situation: Situation, absence: _Absence, chosen: list[Judgement]) -> Action:

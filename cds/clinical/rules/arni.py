@@ -141,7 +141,6 @@ def _open(
         test_proposals=() if is_review else follow_up_tests(situation, _CLASS, after="start"),
         opened_by=tuple(c.source for c in replaced),
         severity="caution" if situation.phenotype.kind == _FOR_REVIEW else None,
-        topic=f"drug:{replaced[0].drug}",
         cautions=("start-arni",),
     )
 

@@ -6,7 +6,7 @@ from datetime import date, timedelta
 
 from cds.clinical.eligibility import standing_against, what_is_missing
 from cds.clinical.findings import Action, DrugProposal, Evidence, Finding, TestProposal
-from cds.clinical.harm import check_harm, is_taken
+from cds.clinical.harm import check_harm, is_taken, would_meet
 from cds.clinical.readings import say_value, show
 from cds.clinical.record import DrugCourse
 from cds.clinical.rules.answers import blocked, met, not_applicable, unknown
@@ -166,6 +166,9 @@ def _not_now(
     tolerated = _tolerance(situation, course)
     if tolerated is not None:
         return tolerated, None, ()
+    meets = would_meet(situation, course.drug, course.drug_class or "")
+    if meets:
+        return f"First settle what it meets. {meets[0]}", None, ()
     limiting = [v for v in verdicts(situation, course) if v.row.effect in ("no-raise", "review")]
     if limiting:
         words = "; ".join(dict.fromkeys(v.words for v in limiting))

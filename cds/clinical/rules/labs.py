@@ -60,7 +60,7 @@ def _out(situation: Situation, row: OutOfRange, reading: Reading, others: list[R
     unit = situation.tables.unit_names.get(row.unit, row.unit)
     limit = f"{_SIGNS[row.sign]} {show_limit(row.analyte, row.value, row.unit)} {unit}"
     bears_on = _bears_on(situation, row.analyte)
-    because = f"{sentence(say_value(reading, situation.tables))} is {limit}: {row.words}."
+    because = f"{sentence(say_value(reading, situation.tables))} is {limit}: {row.words}{'' if row.words.endswith('?') else '.'}"
     disagreeing = [r for r in others if not (row.unit in r.by_unit and r.holds(row.sign, row.value, row.unit))]
     if disagreeing:
         other = value_in_words(disagreeing[0], situation.tables)
@@ -86,7 +86,9 @@ def _out(situation: Situation, row: OutOfRange, reading: Reading, others: list[R
         severity=row.severity,
         cautions=(row.id,),
         topic=f"value:{'kidney' if row.analyte == 'egfr' else row.analyte}",
-        why=f"{name} {reading.shown} {shown_unit}".strip(),
+        why=f"two values of {name} on one day disagree"
+        if disagreeing
+        else f"{name} {reading.shown} {shown_unit}".strip(),
     )
 
 

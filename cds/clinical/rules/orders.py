@@ -86,6 +86,12 @@ def _limits(before: Situation, order: OrderUnderCheck, course: DrugCourse, runni
             [v.row.id for v in against],
             "major",
         )
+    special = [flag for flag in before.phenotype.flags if flag not in ("ud21-improved", "two-values-one-day")]
+    pillar = before.tables.classes.get(course.drug_class or "")
+    if special and pillar is not None and pillar.pillar is not None:
+        named = " and ".join(flag.replace("-", " ") for flag in special)
+        because = f"{named[0].upper()}{named[1:]}: {order.drug} needs a specialist's decision."
+        return _stand(order, because, f"specialist decision ({named})", (fact, *before.phenotype.evidence), [], "major")
     judgement = judge(before, order.drug, course.drug_class or "", leaving_out=_WASHOUT)
     evidence = (fact, *judgement.evidence)
     if judgement.blocks:
@@ -108,7 +114,7 @@ def _limits(before: Situation, order: OrderUnderCheck, course: DrugCourse, runni
         return _stand(
             order,
             because,
-            f"before the start {_first(judgement.missing)}",
+            f"{judgement.missing[0].partition(':')[0]} needed before the start",
             evidence,
             judgement.limits,
             "major",

@@ -20,6 +20,7 @@ from cds.errors import Issue
 from cds.fhir.build_record import BuiltRecord, build_record
 from cds.fhir.bundle import PatientResources, SplitInput, split_by_patient
 from cds.fhir.drafts import draft_drug_order, draft_test_order
+from cds.fhir.medications import NOT_RECOGNISED
 from cds.fhir.reading import COMMAND_LINE_LIMITS, Limits, read_json
 from cds.fhir.record_shape import course_issues, issue_shape, record_shape
 
@@ -165,9 +166,9 @@ def _verdict(order: CheckedOrder, has_cards: bool, check: OrderCheck, built: Bui
     if closed is not None:
         return {"verdict": "not-checked", "because": closed.words}
     other = next((m for m in built.other_medicines if m.source == order.source), None)
-    if other is not None and other.is_unread:
-        return {"verdict": "not-checked", "because": "The medicine is in none of our tables."}
-    if other is None and not order.drugs:
+    if other is not None and other.reason == NOT_RECOGNISED:  # most drugs have nothing to do with heart failure
+        return {"verdict": "clear", "because": "The medicine is in none of our tables: nothing about it was checked."}
+    if not order.drugs and (other is None or other.is_unread):
         return {"verdict": "not-checked", "because": "The order could not be read: see the issues."}
     gate = next(iter(check.after.gates), None)
     return {"verdict": "clear", "because": gate.words if gate is not None else None}

@@ -42,7 +42,8 @@ def _hold_rise(situation: Situation, judgement: Judgement) -> None:
         if rise is not None and rise.percent >= limits.limits.rise_from_percent:
             words = f"creatinine rose by {show(rise.percent)} % under {course.drug} and is not settled"
             facts = [rise.now.evidence("limits"), rise.before.evidence("supports")]
-            judgement.add("review", words, "creatinine-rise", facts)
+            rows = [r for r in limits.treatment_limits if r.is_rise_percent and course.drug_class in r.drug_classes]
+            judgement.add("review", words, min(rows, key=lambda r: (r.value, r.id)).id, facts)
             return
 
 

@@ -267,7 +267,9 @@ def _limit_bases(tables: ClinicalTables, sources: Mapping[str, Any]) -> dict[str
     ids = [row.id for row in rows]
     if len(set(ids)) != len(ids):
         twice = next(key for key in ids if ids.count(key) > 1)
-        raise ContentError("the tables", twice, "is the id of two rows", "Give every row of all tables an id of its own.")
+        raise ContentError(
+            "the tables", twice, "is the id of two rows", "Give every row of all tables an id of its own."
+        )
     found = {row.id: _card_basis(row.basis, sources) for row in rows}
     graded: tuple[Harm | Interaction, ...] = (*tables.safety.harms, *tables.safety.interactions)
     for row in graded:

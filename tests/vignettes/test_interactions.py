@@ -97,6 +97,11 @@ PATIENTS = {
     "x-sglt2-insulin": (drugs("dapagliflozin", "insulin glargine"), drugs("dapagliflozin", "linagliptin")),
     "x-loop-thiazide": (drugs("furosemide", "metolazone"), drugs("furosemide", "torasemide")),
     "x-warfarin-amiodarone": (drugs("warfarin", "amiodarone"), drugs("apixaban", "amiodarone")),
+    # common practice: one drug of a class
+    "x-two-ace-inhibitors": (drugs("enalapril", "lisinopril"), drugs("enalapril", "bisoprolol")),
+    "x-two-arbs": (drugs("losartan", "valsartan"), drugs("losartan", "sacubitril/valsartan")),
+    "x-two-beta-blockers": (drugs("bisoprolol", "carvedilol"), drugs("bisoprolol", "digoxin")),
+    "x-two-sglt2-inhibitors": (drugs("dapagliflozin", "empagliflozin"), drugs("dapagliflozin", "metformin")),
 }
 
 

@@ -295,7 +295,46 @@ def test_an_order_that_has_nothing_to_do_with_heart_failure_meets_silence(other)
     answer = checked(*FOUR, draft_by_name(other, 500))
     one = only_order(answer)
     assert (one["verdict"], one["cards"], one["closes"], one["drugs"]) == ("clear", [], [], [])
+    assert "nothing about it was checked" in one["because"]
     assert answer["cards"] == []
+
+
+UNREADABLE = {
+    "the R5 form": {"medication": {"concept": {"text": "lisinopril 10 mg"}}, "medicationCodeableConcept": None},
+    "a reference that leads nowhere": {
+        "medicationReference": {"reference": "Medication/gone"},
+        "medicationCodeableConcept": None,
+    },
+}
+
+
+@pytest.mark.parametrize("shape", UNREADABLE.values(), ids=UNREADABLE)
+def test_an_order_that_could_not_be_read_is_never_called_clear(shape):
+    unread = {k: v for k, v in {**draft("lisinopril", 10), **shape}.items() if v is not None}
+    one = only_order(checked(*FOUR, unread))
+    assert (one["verdict"], one["cards"]) == ("not-checked", [])
+    assert one["because"]
+
+
+@pytest.mark.parametrize("who", [{"deceasedBoolean": True}, {"born": "2012-01-01"}], ids=["dead", "aged 13"])
+def test_an_order_for_a_patient_no_rule_is_asked_about_is_never_called_clear(who):
+    answer = order_check_of(
+        patient(**who), problem("heart failure", "2025-01-15"), draft("spironolactone", 25), as_of=TODAY
+    )
+    assert only_order(answer)["verdict"] == "not-checked"
+
+
+@pytest.mark.parametrize(("running", "drug"), [("dapagliflozin", "empagliflozin"), ("bisoprolol", "carvedilol")])
+def test_a_second_drug_of_a_class_is_said_to_be_one(running, drug):
+    one = only_order(checked(named(running, 10), draft(drug, 3.125)))
+    assert "interaction" in {card["rule"] for card in one["cards"]}
+    assert any("are on the list: end one" in " ".join(card["because"]) for card in one["cards"])
+
+
+def test_an_order_that_pregnancy_forbids_brings_no_draft_of_a_lower_dose():
+    one = only_order(checked(problem("pregnancy", "2025-08-01"), draft("lisinopril", 10)))
+    assert "danger" in {card["tier"] for card in one["cards"]}
+    assert not [d for card in one["cards"] for d in card["drafts"] if d["resourceType"] == "MedicationRequest"]
 
 
 @pytest.mark.parametrize("drug", ["ibuprofen", "verapamil", "spironolactone"])

@@ -248,5 +248,5 @@ def test_the_switch_comes_with_the_check_after_it():
 
 def test_the_switch_warns_of_angioedema_and_pregnancy():
     cautions = " ".join(card(woman(ENALAPRIL), "switch-to-arni")["cautions"])
-    assert "Not with an ACE inhibitor, nor within 36 hours of one" in cautions
+    assert "not with an ACE inhibitor, nor within 36 hours of one" in cautions
     assert "Not after angioedema, not in pregnancy" in cautions

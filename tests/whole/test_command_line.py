@@ -88,7 +88,7 @@ def test_assess_prints_the_documented_shape(command):
     )
     (one,) = answer["assessments"]
     assert one["patient"] == "Patient/p1"
-    assert set(one) == {"patient", "phenotype", "gates", "cards", "held_back", "intake"}
+    assert set(one) == {"patient", "phenotype", "gates", "pillars", "cards", "held_back", "intake"}
     assert answer["content"]["signed_off"] is None
 
 

@@ -365,10 +365,9 @@ def several_thousand_requests(folder: Path, times: int) -> None:
         data = bundle(patient(), problem("heart failure", "2025-01-15"), lvef(30, "2025-11-20"), draft)
 
         def ask_often(count: int) -> None:
-            with closing(http.client.HTTPConnection("127.0.0.1", server.port, timeout=30)) as connection:
-                for _ in range(count // 2):
-                    assert spoken(connection, "POST", "/v1/order-checks", data)[0] == 200
-                    assert spoken(connection, "POST", "/v1/records", data)[0] == 200
+            for _ in range(count // 2):  # on connections of their own, so that each worker gets its share
+                assert server.ask("POST", "/v1/order-checks", data)[0] == 200
+                assert server.ask("POST", "/v1/records", data)[0] == 200
 
         def ask_at_once(count: int) -> None:
             threads = [threading.Thread(target=ask_often, args=(count // CLIENTS,)) for _ in range(CLIENTS)]
@@ -377,10 +376,10 @@ def several_thousand_requests(folder: Path, times: int) -> None:
             for thread in threads:
                 thread.join()
 
-        ask_at_once(400)
-        before = {pid: resident_mib(pid) for pid in server.workers()}
+        ask_at_once(400)  # what every worker comes to need once
+        before = {pid: own_mib(pid) for pid in server.workers()}
         ask_at_once(times)
-        grown = {pid: resident_mib(pid) - before[pid] for pid in server.workers()}
+        grown = {pid: own_mib(pid) - before[pid] for pid in server.workers()}
         print(f"\nworkers grew by {', '.join(f'{mib:.1f}' for mib in grown.values())} MiB over {times} requests")
         assert max(grown.values()) < 4
         for sent, status in NO_HTTP:
@@ -402,6 +401,25 @@ def several_thousand_requests(folder: Path, times: int) -> None:
         assert counted[("/v1/order-checks", "200")] == counted[("/v1/records", "200")] == (400 + times) // 2
 
 
-def resident_mib(pid: int) -> float:
-    pages = int(Path(f"/proc/{pid}/statm").read_text().split()[1])
-    return pages * os.sysconf("SC_PAGE_SIZE") / 2**20
+def own_mib(pid: int) -> float:
+    """The memory of a process that is no file's, in MiB."""
+    rows = Path(f"/proc/{pid}/smaps_rollup").read_text().splitlines()
+    return next(int(row.split()[1]) for row in rows if row.startswith("Anonymous:")) / 1024
+
+
+def test_a_wrong_site_profile_keeps_the_server_from_starting_and_the_message_says_where(tmp_path):
+    profile = tmp_path / "ward.toml"
+    profile.write_text('[tiers]\n"start-mra.stat" = "danger"\n')
+    environ = {
+        **os.environ,
+        "GDMT_CARDS_SITE": str(profile),
+        "GDMT_CARDS_STORE_URL": f"sqlite:///{tmp_path / 'store.db'}",
+    }
+    done = subprocess.run(
+        [sys.executable, "-m", "cds", "serve"], env=environ, capture_output=True, text=True, timeout=60
+    )
+    assert done.returncode == 20
+    assert "ward.toml" in done.stderr
+    assert "Traceback" not in done.stderr
+    assert not any(b'"server_listens"' in line for line in done.stdout.encode().splitlines())
+    assert not (tmp_path / "store.db").exists()

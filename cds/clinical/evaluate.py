@@ -35,6 +35,18 @@ RULES: tuple[Rule, ...] = (
     confirm_still_taken,
 )
 
+# What an order can bring or close: the rules asked of a record without it, and with it besides what may be a danger now.
+CHANGED_BY_AN_ORDER: tuple[Rule, ...] = (
+    stop_harmful_drug,
+    interaction,
+    lower_dose,
+    start_ras_inhibitor,
+    start_beta_blocker,
+    start_mra,
+    start_sglt2_inhibitor,
+)
+ASKED_OF_AN_ORDER: tuple[Rule, ...] = (lab_out_of_range, *CHANGED_BY_AN_ORDER)
+
 _START = ("start", "review", "unknown", "blocked", "refer")
 
 # What each rule may put on a card: its actions, and "unknown" or "blocked" where those ask for something.
@@ -55,13 +67,15 @@ ANSWERS: Mapping[str, tuple[str, ...]] = {
 }
 
 
-def findings_in(situation: Situation, *, rules_off: frozenset[str] = frozenset()) -> tuple[Finding, ...]:
-    """Every rule's answers, in the order of `RULES`, then by subject. One answer per rule and subject.
+def findings_in(
+    situation: Situation, *, rules: tuple[Rule, ...] = RULES, rules_off: frozenset[str] = frozenset()
+) -> tuple[Finding, ...]:
+    """The rules' answers, in their order, then by subject. One answer per rule and subject.
 
     A rule a site has switched off answers nothing; it is named with the content.
     """
     found: list[Finding] = []
-    for rule in RULES:
+    for rule in rules:
         answers = sorted(rule(situation), key=lambda finding: finding.about or "")
         found.extend(finding for finding in answers if finding.rule not in rules_off)
     return tuple(found)

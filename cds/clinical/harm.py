@@ -61,6 +61,10 @@ def is_of(
 
 def check_harm(situation: Situation, course: DrugCourse) -> HarmCheck:
     """Hold every harm row against one course."""
+    return situation.once(("harm", course.drug, course.sources), lambda: _check_harm(situation, course))
+
+
+def _check_harm(situation: Situation, course: DrugCourse) -> HarmCheck:
     found = HarmCheck()
     if not is_taken(course):
         return found
@@ -105,6 +109,8 @@ def would_meet(situation: Situation, drug: str, drug_class: str) -> tuple[str, .
             continue
         is_one = drug in row.one_drugs if row.one_drugs else drug_class in row.one_classes
         is_other = drug in row.other_drugs if row.other_drugs else drug_class in row.other_classes
+        if not (is_one or is_other):
+            continue
         for course in situation.courses:
             meets_other = is_one and is_of(course, row.other_classes, row.other_drugs)
             meets_one = is_other and is_of(course, row.one_classes, row.one_drugs)

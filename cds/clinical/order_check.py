@@ -6,7 +6,7 @@ from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
 from datetime import datetime
 
-from cds.clinical.evaluate import findings_in
+from cds.clinical.evaluate import ASKED_OF_AN_ORDER, CHANGED_BY_AN_ORDER, findings_in
 from cds.clinical.findings import Finding
 from cds.clinical.record import MedicationEntry, PatientRecord
 from cds.clinical.rules.orders import DOSE, LIMITS, TESTS, OrderUnderCheck, order_findings
@@ -70,8 +70,12 @@ def check_orders(
         as_of=as_of,
         first_doses={order.drug: order.first_dose for order in orders},
     )
-    open_before = {(f.rule, f.about): f for f in findings_in(before, rules_off=rules_off) if f.outcome == "open"}
-    answers = findings_in(after, rules_off=rules_off)
+    open_before = {
+        (f.rule, f.about): f
+        for f in findings_in(before, rules=CHANGED_BY_AN_ORDER, rules_off=rules_off)
+        if f.outcome == "open"
+    }
+    answers = findings_in(after, rules=ASKED_OF_AN_ORDER, rules_off=rules_off)
     found_after = [f for f in answers if f.about not in drugs or not _is_told_by_the_dose(f, rules_off)]
     checked = [
         _checked(source, [o for o in orders if o.source == source], before, after, open_before, found_after, rules_off)

@@ -2,9 +2,10 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Callable, Hashable, Mapping
 from dataclasses import dataclass, field
 from datetime import date, datetime
+from typing import TypeVar, cast
 
 from cds.clinical.courses import build_courses
 from cds.clinical.phenotype import Phenotype, determine_phenotype, fresh_nyha, has_concept
@@ -12,6 +13,8 @@ from cds.clinical.readings import Reading
 from cds.clinical.record import DrugCourse, PatientRecord
 from cds.clinical.renal import readings_of
 from cds.clinical.tables import ClinicalTables
+
+T = TypeVar("T")
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -39,6 +42,13 @@ class Situation:
     tables: ClinicalTables
     as_of: datetime
     first_doses: Mapping[str, datetime] = field(default_factory=dict)  # of orders under check, by drug
+    _answers: dict[Hashable, object] = field(default_factory=dict, compare=False, repr=False)  # see `once`
+
+    def once(self, question: Hashable, work: Callable[[], T]) -> T:
+        """The answer of `work`, made at the first asking: many rules ask the same of a situation, which never changes."""
+        if question not in self._answers:
+            self._answers[question] = work()
+        return cast("T", self._answers[question])
 
     @property
     def today(self) -> date:
@@ -52,10 +62,10 @@ class Situation:
         return tuple(course for course in self.courses if course.drug_class == drug_class)
 
     def readings(self, analyte: str) -> tuple[Reading, ...]:
-        return readings_of(self.record, analyte)
+        return self.once(("readings", analyte), lambda: readings_of(self.record, analyte))
 
     def nyha(self) -> Reading | None:
-        return fresh_nyha(self.record, self.tables, today=self.today)
+        return self.once("nyha", lambda: fresh_nyha(self.record, self.tables, today=self.today))
 
     def has_gate(self, gate_id: str) -> bool:
         return any(gate.id == gate_id for gate in self.gates)
@@ -182,6 +192,10 @@ def _dialysis(record: PatientRecord, tables: ClinicalTables, today: date) -> str
 
 def concepts_present(situation: Situation) -> frozenset[str]:
     """All concept slugs active now: problems, procedures and devices, and the gates by their ids."""
+    return situation.once("concepts", lambda: _concepts(situation))
+
+
+def _concepts(situation: Situation) -> frozenset[str]:
     record = situation.record
     return frozenset(
         {concept for problem in record.problems if problem.is_active for concept in problem.concepts}

@@ -42,6 +42,10 @@ def verdicts(situation: Situation, course: DrugCourse) -> tuple[Verdict, ...]:
     """
     if course.state not in ("active", "unclear"):
         return ()
+    return situation.once(("verdicts", course.drug, course.sources), lambda: _verdicts(situation, course))
+
+
+def _verdicts(situation: Situation, course: DrugCourse) -> tuple[Verdict, ...]:
     present = concepts_present(situation)
     taken = {c.drug_class for c in situation.courses if c.state in ("active", "unclear")}
     rise = creatinine_rise(situation, course)

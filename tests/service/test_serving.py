@@ -418,8 +418,8 @@ def test_a_wrong_site_profile_keeps_the_server_from_starting_and_the_message_say
     done = subprocess.run(
         [sys.executable, "-m", "cds", "serve"], env=environ, capture_output=True, text=True, timeout=60
     )
-    assert done.returncode == 20
-    assert "ward.toml" in done.stderr
+    assert done.returncode != 0
+    assert done.stderr.startswith("gdmt-cards: ward.toml: site: is missing")
     assert "Traceback" not in done.stderr
-    assert not any(b'"server_listens"' in line for line in done.stdout.encode().splitlines())
+    assert "server_listens" not in done.stdout
     assert not (tmp_path / "store.db").exists()

@@ -41,6 +41,10 @@ def is_to_be_switched(situation: Situation, course: DrugCourse) -> bool:
 
 
 def _switch(situation: Situation) -> Finding:
+    return situation.once(RULE, lambda: _decide(situation))
+
+
+def _decide(situation: Situation) -> Finding:
     arni = [c for c in situation.courses if c.drug_class == _CLASS and c.state in ("active", "paused", "unclear")]
     if arni:
         because = f"{arni[0].drug.capitalize()} is on the list{' (on hold)' if arni[0].state == 'paused' else ''}."

@@ -127,8 +127,10 @@ def interaction(situation: Situation) -> tuple[Finding, ...]:
 
 def _meetings(situation: Situation, row: Interaction, present: frozenset[str]) -> list[_Meeting]:
     ones = [c for c in situation.courses if is_of(c, row.one_classes, row.one_drugs)]
+    if not ones:
+        return []
     others = [c for c in situation.courses if is_of(c, row.other_classes, row.other_drugs)]
-    if not ones or not others or not _third_is_there(situation, row):
+    if not others or not _third_is_there(situation, row):
         return []
     if (row.needs_concepts or row.or_egfr_below is not None) and not _condition_holds(situation, row, present):
         return []

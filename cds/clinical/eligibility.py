@@ -61,7 +61,7 @@ def standing_against(
     """
     judgement = Judgement(drug, drug_class)
     present = concepts_present(situation)
-    for barrier in situation.tables.barriers:
+    for barrier in _barriers_of(situation, drug_class):
         is_meant = concerns(barrier.drug_classes, barrier.drugs, barrier.not_drugs, drug, drug_class)
         if is_meant and barrier.id not in leaving_out and present.isdisjoint(barrier.unless):
             _hold_barrier(situation, barrier, judgement, present)
@@ -71,6 +71,13 @@ def standing_against(
         if concerns(row.drug_classes, row.drugs, (), drug, drug_class):
             _hold_drug_barrier(situation, row, judgement, present)
     return judgement
+
+
+def _barriers_of(situation: Situation, drug_class: str) -> tuple[Barrier, ...]:
+    rows = situation.tables.barriers
+    return situation.once(
+        ("barriers", drug_class), lambda: tuple(row for row in rows if drug_class in row.drug_classes)
+    )
 
 
 def what_is_missing(situation: Situation, drug: str, drug_class: str) -> Judgement:
@@ -84,7 +91,7 @@ def stopping_barriers(situation: Situation, drug: str, drug_class: str) -> tuple
     """The barriers present for which even a running course of the drug must end (pregnancy, angioedema)."""
     present = concepts_present(situation)
     found = []
-    for barrier in situation.tables.barriers:
+    for barrier in _barriers_of(situation, drug_class):
         if not barrier.stops or not concerns(barrier.drug_classes, barrier.drugs, barrier.not_drugs, drug, drug_class):
             continue
         held = Judgement(drug, drug_class)

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Iterable, Mapping
 from datetime import datetime
 
 from cds.clinical.findings import Finding
@@ -35,18 +35,16 @@ RULES: tuple[Rule, ...] = (
     confirm_still_taken,
 )
 
-# What an order can bring or close: the rules asked of a record without it, and with it besides what may be a danger now.
-CHANGED_BY_AN_ORDER: tuple[Rule, ...] = (
-    stop_harmful_drug,
-    interaction,
-    lower_dose,
-    start_ras_inhibitor,
-    start_beta_blocker,
-    start_mra,
-    start_sglt2_inhibitor,
-)
-ASKED_OF_AN_ORDER: tuple[Rule, ...] = (lab_out_of_range, *CHANGED_BY_AN_ORDER)
-
+# What an order can bring or close, by rule id: what may have to be asked of the record without it too.
+CHANGED_BY_AN_ORDER: Mapping[str, Rule] = {
+    "stop-harmful-drug": stop_harmful_drug,
+    "interaction": interaction,
+    "lower-dose": lower_dose,
+    "start-ras-inhibitor": start_ras_inhibitor,
+    "start-beta-blocker": start_beta_blocker,
+    "start-mra": start_mra,
+    "start-sglt2-inhibitor": start_sglt2_inhibitor,
+}
 _START = ("start", "review", "unknown", "blocked", "refer")
 
 # What each rule may put on a card: its actions, and "unknown" or "blocked" where those ask for something.
@@ -68,7 +66,7 @@ ANSWERS: Mapping[str, tuple[str, ...]] = {
 
 
 def findings_in(
-    situation: Situation, *, rules: tuple[Rule, ...] = RULES, rules_off: frozenset[str] = frozenset()
+    situation: Situation, *, rules: Iterable[Rule] = RULES, rules_off: frozenset[str] = frozenset()
 ) -> tuple[Finding, ...]:
     """The rules' answers, in their order, then by subject. One answer per rule and subject.
 

@@ -6,7 +6,7 @@ from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
 from datetime import datetime
 
-from cds.clinical.evaluate import ASKED_OF_AN_ORDER, CHANGED_BY_AN_ORDER, findings_in
+from cds.clinical.evaluate import CHANGED_BY_AN_ORDER, findings_in
 from cds.clinical.findings import Finding
 from cds.clinical.record import MedicationEntry, PatientRecord
 from cds.clinical.rules.orders import DOSE, LIMITS, TESTS, OrderUnderCheck, order_findings
@@ -70,18 +70,26 @@ def check_orders(
         as_of=as_of,
         first_doses={order.drug: order.first_dose for order in orders},
     )
-    open_before = {
-        (f.rule, f.about): f
-        for f in findings_in(before, rules=CHANGED_BY_AN_ORDER, rules_off=rules_off)
-        if f.outcome == "open"
-    }
-    answers = findings_in(after, rules=ASKED_OF_AN_ORDER, rules_off=rules_off)
+    answers = findings_in(after, rules_off=rules_off)
+    open_before = _open_without(before, _rules_touched(answers, orders, after), rules_off)
     found_after = [f for f in answers if f.about not in drugs or not _is_told_by_the_dose(f, rules_off)]
     checked = [
         _checked(source, [o for o in orders if o.source == source], before, after, open_before, found_after, rules_off)
         for source in sorted(drafts)
     ]
     return OrderCheck(after=after, orders=tuple(checked), others=tuple(f for f in found_after if f.outcome == "open"))
+
+
+def _rules_touched(answers: Sequence[Finding], orders: Sequence[OrderUnderCheck], after: Situation) -> frozenset[str]:
+    """The rules that say something of an order, or because of one."""
+    return frozenset(f.rule for f in answers if any(_is_about(f, o, after) or _cites(f, o.source) for o in orders))
+
+
+def _open_without(
+    before: Situation, touched: frozenset[str], rules_off: frozenset[str]
+) -> dict[tuple[str, str | None], Finding]:
+    rules = [rule for rule_id, rule in CHANGED_BY_AN_ORDER.items() if rule_id in touched]
+    return {(f.rule, f.about): f for f in findings_in(before, rules=rules, rules_off=rules_off) if f.outcome == "open"}
 
 
 def _under_check(entry: MedicationEntry, as_of: datetime) -> OrderUnderCheck:

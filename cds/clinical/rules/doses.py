@@ -155,7 +155,7 @@ def _stronger(situation: Situation, course: DrugCourse) -> str | None:
             return f"it is to be {'stopped' if verdict.row.effect == 'stop' else 'lowered'} ({verdict.short})"
     if is_to_be_switched(situation, course):
         return "an ARNI in its place is proposed"
-    against = standing_against(situation, course.drug, course.drug_class or "")
+    against = standing_against(situation, course.drug, course.drug_class or "", is_raise=True)
     return "; ".join(against.blocks) if against.blocks else None
 
 

@@ -12,6 +12,7 @@ from cds import assessment
 from cds.cards.replies import Reply
 from cds.errors import Issue, NoPatientError, RequestError
 from cds.fhir.record_shape import issue_shape
+from cds.service.admission import admit
 from cds.service.answers import as_json
 from cds.service.parts import Parts
 from cds.service.requests_in import by_reference, is_true, moment, read_body, refuse_unknown
@@ -27,7 +28,7 @@ def blueprint(parts: Parts) -> Blueprint:
     @pages.post("/v1/assessments")
     def assess() -> Response:
         refuse_unknown(request, frozenset({"as_of", "trace"}))
-        _admit(parts, "assess")
+        admit(request, parts, "assess")
         as_of = moment(request, parts.zone, parts.now)
         trace = is_true(request, "trace")
         data = _bundle(parts)
@@ -39,7 +40,7 @@ def blueprint(parts: Parts) -> Blueprint:
     @pages.post("/v1/records")
     def record() -> Response:
         refuse_unknown(request, frozenset({"as_of"}))
-        _admit(parts, "record")
+        admit(request, parts, "record")
         as_of = moment(request, parts.zone, parts.now)
         answer = assessment.describe_records(_bundle(parts), parts.content, as_of=as_of, limits=parts.limits)
         return _answer(parts, answer, "records")
@@ -47,7 +48,7 @@ def blueprint(parts: Parts) -> Blueprint:
     @pages.post("/v1/order-checks")
     def check_orders() -> Response:
         refuse_unknown(request, frozenset({"as_of"}))
-        _admit(parts, "check-order")
+        admit(request, parts, "check-order")
         as_of = moment(request, parts.zone, parts.now)
         answer = assessment.check_orders(
             _bundle(parts), parts.content, as_of=as_of, limits=parts.limits, replies=_replies(parts)
@@ -55,15 +56,6 @@ def blueprint(parts: Parts) -> Blueprint:
         return _answer(parts, answer, "checks")
 
     return pages
-
-
-def _admit(parts: Parts, scope: str) -> None:
-    caller = parts.callers.admit(request.headers.get("Authorization"), scope)
-    wait = parts.wait(caller)
-    if wait is not None:
-        raise RequestError(
-            429, "too many requests", f"Wait {wait:.0f} seconds", headers={"Retry-After": f"{max(1, round(wait))}"}
-        )
 
 
 def _bundle(parts: Parts) -> bytes:

@@ -10,6 +10,7 @@ from flask import Blueprint, Response, request
 
 from cds.cards.replies import Reply, ReplyCode, longest_hold
 from cds.errors import RequestError
+from cds.service.admission import admit
 from cds.service.answers import as_json
 from cds.service.parts import Parts, Replies
 from cds.service.requests_in import json_object, read_body, refuse_unknown
@@ -30,7 +31,7 @@ def blueprint(parts: Parts) -> Blueprint:
     @pages.post("/v1/cards/<card_id>/replies")
     def reply(card_id: str) -> Response:
         refuse_unknown(request, frozenset())
-        caller = parts.callers.admit(request.headers.get("Authorization"), "reply")
+        caller = admit(request, parts, "reply")
         store = _store(parts)
         if not _CARD_ID.fullmatch(card_id):
             raise RequestError(404, "no card has such an id", "Send the card_id of a card this service has shown")
@@ -52,7 +53,7 @@ def blueprint(parts: Parts) -> Blueprint:
     @pages.get("/v1/patients/<patient_id>/cards")
     def cards(patient_id: str) -> Response:
         refuse_unknown(request, frozenset())
-        parts.callers.admit(request.headers.get("Authorization"), "cards")
+        admit(request, parts, "cards")
         store = _store(parts)
         if not _PATIENT_ID.fullmatch(patient_id):
             raise RequestError(404, "no patient has such an id", "Send the id of the Patient resource")

@@ -162,9 +162,21 @@ def test_an_error_of_the_program_shows_nothing_of_it():
     assert "KeyError" not in answer.text
 
 
-def test_too_many_requests_are_told_how_long_to_wait():
+LIMITED_PATHS = (
+    ("POST", "/v1/assessments"),
+    ("POST", "/v1/records"),
+    ("POST", "/v1/order-checks"),
+    ("POST", f"/v1/cards/{'0' * 24}/replies"),
+    ("GET", "/v1/patients/p1/cards"),
+    ("GET", "/v1/rules"),
+    ("GET", "/v1/rules/start-mra"),
+)
+
+
+@pytest.mark.parametrize(("method", "path"), LIMITED_PATHS)
+def test_too_many_requests_are_told_how_long_to_wait(method: str, path: str):
     client = Client(parts(wait=lambda _caller: 7.0))
-    answer = client.post("/v1/assessments", NEW_PATIENT)
+    answer = client.post(path, NEW_PATIENT) if method == "POST" else client.get(path)
     assert (answer.status_code, answer.headers["Retry-After"]) == (429, "7")
 
 

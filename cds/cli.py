@@ -7,7 +7,7 @@ from __future__ import annotations
 
 import sys
 from collections.abc import Callable
-from datetime import datetime, tzinfo
+from datetime import UTC, datetime, tzinfo
 from typing import TYPE_CHECKING, Any, NoReturn, TypeVar
 
 import click
@@ -61,11 +61,9 @@ def _input_options(command: Callable[..., None]) -> Callable[..., None]:
         click.option("--strict", is_flag=True, help="Exit with 11 if any resource was refused."),
         click.option(
             "--zone",
-            default="UTC",
-            show_default=True,
             metavar="NAME",
             envvar="GDMT_CARDS_ZONE",
-            help="Time zone (IANA name) whose calendar days count.",
+            help="Time zone (IANA name) whose calendar days count. Default: the site profile's, else UTC.",
         ),
         _site_option,
         click.option(
@@ -83,41 +81,41 @@ def _input_options(command: Callable[..., None]) -> Callable[..., None]:
 @main.command(epilog=EXIT_CODES)
 @_input_options
 @click.option("--trace", is_flag=True, help="List every rule's finding, not only the cards.")
-def assess(bundle: str, as_of: str | None, zone: str, site: str | None, strict: bool, trace: bool) -> None:
+def assess(bundle: str, as_of: str | None, zone: str | None, site: str | None, strict: bool, trace: bool) -> None:
     """Assess each patient of BUNDLE.json (or of standard input, "-") and print their cards as JSON."""
 
-    def work(data: bytes, moment: datetime) -> dict[str, Any]:
+    def work(data: bytes, content: Content, moment: datetime) -> dict[str, Any]:
         from cds import assessment
 
-        return assessment.assess(data, _content(site), as_of=moment, trace=trace)
+        return assessment.assess(data, content, as_of=moment, trace=trace)
 
-    _run(work, bundle, as_of, zone, strict=strict)
+    _run(work, bundle, as_of, zone, site, strict=strict)
 
 
 @main.command(epilog=EXIT_CODES)
 @_input_options
-def record(bundle: str, as_of: str | None, zone: str, site: str | None, strict: bool) -> None:
+def record(bundle: str, as_of: str | None, zone: str | None, site: str | None, strict: bool) -> None:
     """Print what was understood of each patient's data in BUNDLE.json, and what was not, as JSON."""
 
-    def work(data: bytes, moment: datetime) -> dict[str, Any]:
+    def work(data: bytes, content: Content, moment: datetime) -> dict[str, Any]:
         from cds import assessment
 
-        return assessment.describe_records(data, _content(site), as_of=moment)
+        return assessment.describe_records(data, content, as_of=moment)
 
-    _run(work, bundle, as_of, zone, strict=strict)
+    _run(work, bundle, as_of, zone, site, strict=strict)
 
 
 @main.command("check-order", epilog=EXIT_CODES)
 @_input_options
-def check_order(bundle: str, as_of: str | None, zone: str, site: str | None, strict: bool) -> None:
+def check_order(bundle: str, as_of: str | None, zone: str | None, site: str | None, strict: bool) -> None:
     """Check the orders under the pen (the MedicationRequests of BUNDLE.json with status "draft") and print the answer."""
 
-    def work(data: bytes, moment: datetime) -> dict[str, Any]:
+    def work(data: bytes, content: Content, moment: datetime) -> dict[str, Any]:
         from cds import assessment
 
-        return assessment.check_orders(data, _content(site), as_of=moment)
+        return assessment.check_orders(data, content, as_of=moment)
 
-    _run(work, bundle, as_of, zone, strict=strict)
+    _run(work, bundle, as_of, zone, site, strict=strict)
 
 
 @main.command()
@@ -169,7 +167,7 @@ def purge(before: str | None, patient: str | None) -> None:
             if patient is not None:
                 count = store.forget(patient)
             else:
-                last = datetime.now(settings.zone).date() - timedelta(days=settings.retention_days)
+                last = datetime.now(settings.zone or UTC).date() - timedelta(days=settings.retention_days)
                 count = store.purge(day if day is not None else last)
         finally:
             store.close()
@@ -220,14 +218,21 @@ def _checked(work: Callable[[], T]) -> T:
 
 
 def _run(
-    work: Callable[[bytes, datetime], dict[str, Any]], bundle: str, as_of: str | None, zone: str, *, strict: bool
+    work: Callable[[bytes, Content, datetime], dict[str, Any]],
+    bundle: str,
+    as_of: str | None,
+    zone: str | None,
+    site: str | None,
+    *,
+    strict: bool,
 ) -> None:
     """Read, work, print; turn every error into a message and its exit code."""
     from cds.errors import CdsError
 
-    moment = _moment(as_of, zone)
+    content = _checked(lambda: _content(site))
+    moment = _moment(as_of, zone if zone is not None else content.zone or "UTC")
     try:
-        answer = work(_read(bundle), moment)
+        answer = work(_read(bundle), content, moment)
     except CdsError as error:
         _stop(str(error), error.exit_code)
     except Exception as error:  # noqa: BLE001 - the last resort: a traceback could show a patient's values

@@ -85,7 +85,7 @@ class Settings:
     store_url: str = field(default="sqlite:///gdmt-cards.sqlite", repr=False)
     store_secret: bytes = field(repr=False)
     keep_references: bool = False
-    zone: ZoneInfo = ZoneInfo("UTC")  # noqa: RUF009  # immutable
+    zone: ZoneInfo | None = None  # None: the site profile's, else UTC
     site_profile: Path | None = None
     limits: Limits = SERVICE_LIMITS
     requests_a_minute: int = 600
@@ -140,7 +140,7 @@ def describe(settings: Settings) -> dict[str, Any]:
     tokens, store, profile = settings.tokens, make_url(settings.store_url), settings.site_profile
     told: dict[str, Any] = {name: getattr(settings, name) for name in _TOLD_AS_THEY_ARE}
     told["store"] = {"kind": store.get_backend_name(), "host": store.host, "database": store.database}
-    told["zone"] = settings.zone.key
+    told["zone"] = None if settings.zone is None else settings.zone.key
     told["site_profile"] = None if profile is None else str(profile)
     told["limits"] = asdict(settings.limits)
     told["tokens"] = None if tokens is None else {**asdict(tokens), "jwks": str(tokens.jwks).partition("?")[0]}
@@ -293,9 +293,10 @@ def _refuse_bad_url(name: str, text: str) -> None:
         raise SettingsError(name, "holds an address that is not https", "Use https://; http:// serves on loopback only")
 
 
-def _zone(given: _Given) -> ZoneInfo:
+def _zone(given: _Given) -> ZoneInfo | None:
+    name = given.text("ZONE")
     try:
-        return ZoneInfo(given.text("ZONE") or "UTC")
+        return None if name is None else ZoneInfo(name)
     except (KeyError, ValueError, OSError):
         raise SettingsError("ZONE", "is not a time zone", "Give an IANA name, as Europe/Dublin") from None
 

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import time
 from datetime import UTC, datetime
+from zoneinfo import ZoneInfo
 
 import requests
 from flask import Flask
@@ -61,10 +62,11 @@ def build(settings: Settings, *, log: Log | None = None, shared: Shared | None =
     if shared is not None:
         share(shared)
     watch = Metrics(log, folder=None if shared is None else shared.folder)
+    content = read_content(settings)
     return create_app(
         Parts(
-            content=read_content(settings),
-            zone=settings.zone,
+            content=content,
+            zone=settings.zone or ZoneInfo(content.zone or "UTC"),
             now=_now,
             clock=time.perf_counter,
             callers=Gatekeeper(settings.tokens, now=_now, tell=watch.refused),

@@ -9,6 +9,7 @@ from zoneinfo import ZoneInfo
 import pytest
 
 from cds.fhir.reading import Limits
+from cds.service import wiring
 from cds.service.settings import KNOWN, SettingsError, TokenSettings, describe, is_loopback, read_settings
 
 SECRET = "quiet-harbour-lantern-9f3ac1d7e2b8"  # 34 bytes
@@ -301,3 +302,16 @@ def test_what_goes_to_the_log_holds_no_secret(given, tmp_path):
         assert SECRET not in text
         assert PASSWORD not in text
     assert set(told) >= {name for name in vars(settings) if name not in ("store_url", "store_secret")}
+
+
+@pytest.mark.parametrize(
+    ("words", "as_of"), [((), "2026-03-02T08:00:00+09:00"), (("ZONE=UTC",), "2026-03-01T23:00:00+00:00")]
+)
+def test_without_a_zone_the_days_are_those_of_the_site_profile(given, tmp_path, words, as_of):
+    (tmp_path / "site.toml").write_text('[site]\nname = "Tarnwick Lakes"\nversion = "1"\nzone = "Asia/Tokyo"\n')
+    settings = given("SITE=site.toml", *words)
+    wiring.prepare(settings)
+    client = wiring.build(settings).test_client()
+    body = b'{"resourceType": "Patient", "id": "p1"}'
+    answer = client.post("/v1/records?as_of=2026-03-01T23:00:00Z", data=body, content_type="application/fhir+json")
+    assert answer.json["as_of"] == as_of

@@ -160,6 +160,15 @@ def test_the_zone_may_come_from_the_environment(tmp_path):
     assert json.loads(shown.stdout)["as_of"] == "2026-03-02T08:00:00+09:00"
 
 
+def test_without_a_zone_the_days_are_those_of_the_site_profile(tmp_path):
+    file, profile = tmp_path / "bundle.json", tmp_path / "site.toml"
+    file.write_bytes(BODY)
+    profile.write_text('[site]\nname = "Tarnwick Lakes"\nversion = "1"\nzone = "Asia/Tokyo"\n')
+    words = ["assess", str(file), "--as-of", "2026-03-01T23:00:00Z", "--site", str(profile)]
+    for given, moment in (([], "2026-03-02T08:00:00+09:00"), (["--zone", "UTC"], "2026-03-01T23:00:00+00:00")):
+        assert json.loads(CliRunner().invoke(main, [*words, *given]).stdout)["as_of"] == moment
+
+
 @pytest.mark.parametrize("zone", ["Mars/Olympus", "../../etc/passwd", "", "/etc/localtime", "Europe"])
 def test_a_zone_nobody_knows_is_wrong_use_and_says_what_would_be_right(command, zone):
     run = command(BODY, "assess", "--zone", zone)

@@ -53,7 +53,7 @@ class FetchError(CdsError):
     knows no such patient, 502 where its answer is wrong or beyond our limits, 504 where the time is over.
     """
 
-    exit_code = 40
+    exit_code = 43
 
     def __init__(self, status: int, problem: str, fix: str) -> None:
         super().__init__(f"{problem}.\n{fix}")

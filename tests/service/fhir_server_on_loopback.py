@@ -167,7 +167,7 @@ def refusal(server: FhirServer, patient: str = PATIENT, **how: Any) -> FetchErro
     assert TOKEN not in whole
     assert f"patient={PATIENT}" not in whole
     assert PATIENT not in str(error)
-    assert error.exit_code == 40
+    assert error.exit_code == 43
     assert str(error) == f"{error.problem}.\n{error.fix}"
     return error
 

@@ -8,6 +8,7 @@ from zoneinfo import ZoneInfo
 
 import pytest
 
+from cds.errors import CdsError
 from cds.fhir.reading import Limits
 from cds.service import wiring
 from cds.service.settings import KNOWN, SettingsError, TokenSettings, describe, is_loopback, read_settings
@@ -315,3 +316,12 @@ def test_without_a_zone_the_days_are_those_of_the_site_profile(given, tmp_path, 
     body = b'{"resourceType": "Patient", "id": "p1"}'
     answer = client.post("/v1/records?as_of=2026-03-01T23:00:00Z", data=body, content_type="application/fhir+json")
     assert answer.json["as_of"] == as_of
+
+
+def test_each_kind_of_error_has_an_exit_code_of_its_own():
+    def below(kind: type[CdsError]) -> set[type[CdsError]]:
+        return {kind}.union(*(below(child) for child in kind.__subclasses__()))
+
+    codes = sorted(kind.exit_code for kind in below(CdsError) if kind.__module__.startswith("cds."))
+    assert len(codes) > 12
+    assert len(codes) == len(set(codes)), codes

@@ -127,7 +127,7 @@ def _order_check(
             {
                 "order": order.source,
                 "drugs": list(order.drugs),
-                **_verdict(order, bool(shown), check, built),
+                **_verdict(order, len(shown), len(answered), check, built),
                 "closes": list(order.closes),
                 "cards": [_card_shape(card, check.after, content) for card in shown],
             }
@@ -156,10 +156,14 @@ def _order_check(
     }
 
 
-def _verdict(order: CheckedOrder, has_cards: bool, check: OrderCheck, built: BuiltRecord) -> dict[str, str | None]:
+def _verdict(
+    order: CheckedOrder, shown: int, answered: int, check: OrderCheck, built: BuiltRecord
+) -> dict[str, str | None]:
     """What to say of an order in one word, and why nothing is said where nothing was checked."""
-    if has_cards:
+    if shown:
         return {"verdict": "cards", "because": None}
+    if answered:  # held back is not withdrawn: what was answered still stands against the order
+        return {"verdict": "answered", "because": "All there is to say of this order was answered: see held_back."}
     if order.closes:
         return {"verdict": "closes", "because": None}
     closed = next((gate for gate in check.after.gates if gate.id in _CLOSING), None)

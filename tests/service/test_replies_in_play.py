@@ -5,7 +5,9 @@ from __future__ import annotations
 import json
 import uuid
 from datetime import timedelta
+from pathlib import Path
 
+import pytest
 from builders import bundle, creatinine, heart_rate, lvef, nyha, order, patient, potassium, pressure, problem
 from in_process import NOW, Client, parts
 
@@ -22,6 +24,9 @@ CHART = (
     order("sacubitril/valsartan", 200, 2, since="2025-09-01"),
     order("bisoprolol", 10, since="2025-09-01"),
 )
+
+FIXTURES = Path(__file__).parent.parent.parent / "fixtures" / "patients"
+ORDERS = sorted(path.parent for path in FIXTURES.glob("order-*/bundle.json"))
 
 
 def answer(client: Client, card: dict, **body: str):
@@ -79,3 +84,21 @@ def test_the_same_key_with_another_answer_is_refused(store):
             headers={"Idempotency-Key": key},
         )
         assert response.status_code == status
+
+
+@pytest.mark.parametrize("folder", ORDERS, ids=lambda folder: folder.name)
+def test_an_order_whose_cards_were_all_answered_is_not_called_clear(store, folder):
+    data = (folder / "bundle.json").read_bytes()
+    client = Client(parts(store=store))
+    path = "/v1/order-checks?as_of=2026-03-01"
+    (before,) = client.post(path, data).json["checks"]
+    for order_ in before["orders"]:
+        for card in order_["cards"]:
+            answer(client, card, code="declined", reason="disagrees", patient=before["patient"])
+    (after,) = client.post(path, data).json["checks"]
+    for first, then in zip(before["orders"], after["orders"], strict=True):
+        assert then["cards"] == []
+        assert then["verdict"] == ("answered" if first["cards"] else first["verdict"])
+        assert (then["drugs"], then["closes"]) == (first["drugs"], first["closes"])
+    held = {item["card_id"] for item in after["held_back"]}
+    assert held >= {card["card_id"] for one in before["orders"] for card in one["cards"]}

@@ -14,6 +14,7 @@ import time
 from collections.abc import Iterator
 from contextlib import ExitStack, closing, contextmanager, suppress
 from pathlib import Path
+from statistics import median
 
 import orjson
 from builders import bundle, creatinine, heart_rate, lvef, nyha, order, patient, potassium, pressure, problem, sodium
@@ -151,12 +152,10 @@ def test_an_order_check_over_http_costs_at_most_two_and_a_half_times_parsing_and
         p99(cards, check, body, 20)
         p99(echo, "/echo", body, 20)
         rounds = [(p99(cards, check, body, REQUESTS), p99(echo, "/echo", body, REQUESTS)) for _ in range(ROUNDS)]
-    best_check, best_echo = (min(column) for column in zip(*rounds, strict=True))
-    ratio = best_check / best_echo
-    print(
-        f"\norder check over HTTP, 40 resources, {WORKERS} workers: p99 {best_check * 1000:.1f} ms, "
-        f"echo {best_echo * 1000:.1f} ms, ratio {ratio:.2f}"
-    )
+    # The two of one round met the same machine; the middle round is neither the luckiest nor the noisiest.
+    ratio = median(ours / bare for ours, bare in rounds)
+    told = ", ".join(f"{ours * 1000:.1f}/{bare * 1000:.1f}" for ours, bare in rounds)
+    print(f"\norder check over HTTP, 40 resources, {WORKERS} workers: p99 {told} ms, middle ratio {ratio:.2f}")
     assert ratio <= BAR
 
 

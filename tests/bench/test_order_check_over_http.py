@@ -14,7 +14,6 @@ import time
 from collections.abc import Iterator
 from contextlib import ExitStack, closing, contextmanager, suppress
 from pathlib import Path
-from statistics import median
 
 import orjson
 from builders import bundle, creatinine, heart_rate, lvef, nyha, order, patient, potassium, pressure, problem, sodium
@@ -24,7 +23,7 @@ from cds.fhir.bundle import USED_TYPES
 from cds.fhir.validate import refusal
 
 BAR = 2.5
-WORKERS, ROUNDS, REQUESTS = 2, 5, 150
+WORKERS, ROUNDS, REQUESTS = 2, 25, 30
 
 
 def forty_resources() -> bytes:
@@ -123,9 +122,13 @@ def is_ready(port: int) -> bool:
     return False
 
 
-def p99(port: int, path: str, body: bytes, times: int) -> float:
-    """The 99th percentile of a caller's wait in seconds, on one connection for each worker in turn."""
-    waits = []
+def p99(seconds: list[float]) -> float:
+    return sorted(seconds)[int(len(seconds) * 0.99) - 1]
+
+
+def waits(port: int, path: str, body: bytes, times: int) -> list[float]:
+    """A caller's waits in seconds, on one connection for each worker in turn."""
+    seconds = []
     with ExitStack() as stack:
         connections = [
             stack.enter_context(closing(http.client.HTTPConnection("127.0.0.1", port, timeout=30)))
@@ -137,9 +140,9 @@ def p99(port: int, path: str, body: bytes, times: int) -> float:
             connection.request("POST", path, body, {"Content-Type": "application/fhir+json"})
             response = connection.getresponse()
             answer = response.read()
-            waits.append(time.perf_counter() - began)
+            seconds.append(time.perf_counter() - began)
             assert response.status == 200, answer
-    return sorted(waits)[int(times * 0.99) - 1]
+    return seconds
 
 
 def test_an_order_check_over_http_costs_at_most_two_and_a_half_times_parsing_and_validating_its_body(tmp_path):
@@ -149,13 +152,17 @@ def test_an_order_check_over_http_costs_at_most_two_and_a_half_times_parsing_and
         serving(tmp_path, __file__, "{port}") as echo,
     ):
         check = "/v1/order-checks?as_of=2026-03-01"
-        p99(cards, check, body, 20)
-        p99(echo, "/echo", body, 20)
-        rounds = [(p99(cards, check, body, REQUESTS), p99(echo, "/echo", body, REQUESTS)) for _ in range(ROUNDS)]
-    # The two of one round met the same machine; the middle round is neither the luckiest nor the noisiest.
-    ratio = median(ours / bare for ours, bare in rounds)
-    told = ", ".join(f"{ours * 1000:.1f}/{bare * 1000:.1f}" for ours, bare in rounds)
-    print(f"\norder check over HTTP, 40 resources, {WORKERS} workers: p99 {told} ms, middle ratio {ratio:.2f}")
+        waits(cards, check, body, 20)
+        waits(echo, "/echo", body, 20)
+        ours, bare = [], []
+        for _ in range(ROUNDS):  # in short turns, so that a busy moment of the machine meets both
+            ours += waits(cards, check, body, REQUESTS)
+            bare += waits(echo, "/echo", body, REQUESTS)
+    ratio = p99(ours) / p99(bare)
+    print(
+        f"\norder check over HTTP, 40 resources, {WORKERS} workers: p99 {p99(ours) * 1000:.1f} ms, "
+        f"echo {p99(bare) * 1000:.1f} ms, ratio {ratio:.2f}"
+    )
     assert ratio <= BAR
 
 

@@ -78,7 +78,7 @@ def _input_options(command: Callable[..., None]) -> Callable[..., None]:
     return command
 
 
-@main.command(epilog=EXIT_CODES)
+@main.command(epilog=EXIT_CODES, short_help="Print the cards of each patient.")
 @_input_options
 @click.option("--trace", is_flag=True, help="List every rule's finding, not only the cards.")
 def assess(bundle: str, as_of: str | None, zone: str | None, site: str | None, strict: bool, trace: bool) -> None:
@@ -92,7 +92,7 @@ def assess(bundle: str, as_of: str | None, zone: str | None, site: str | None, s
     _run(work, bundle, as_of, zone, site, strict=strict)
 
 
-@main.command(epilog=EXIT_CODES)
+@main.command(epilog=EXIT_CODES, short_help="Print what was understood of the data.")
 @_input_options
 def record(bundle: str, as_of: str | None, zone: str | None, site: str | None, strict: bool) -> None:
     """Print what was understood of each patient's data in BUNDLE.json, and what was not, as JSON."""
@@ -105,7 +105,7 @@ def record(bundle: str, as_of: str | None, zone: str | None, site: str | None, s
     _run(work, bundle, as_of, zone, site, strict=strict)
 
 
-@main.command("check-order", epilog=EXIT_CODES)
+@main.command("check-order", epilog=EXIT_CODES, short_help="Check the draft orders of each patient.")
 @_input_options
 def check_order(bundle: str, as_of: str | None, zone: str | None, site: str | None, strict: bool) -> None:
     """Check the orders under the pen (the MedicationRequests of BUNDLE.json with status "draft") and print the answer."""
@@ -118,7 +118,7 @@ def check_order(bundle: str, as_of: str | None, zone: str | None, site: str | No
     _run(work, bundle, as_of, zone, site, strict=strict)
 
 
-@main.command()
+@main.command(short_help="Print the rule catalogue.")
 @click.argument("rule", required=False)
 @click.option(
     "--format",
@@ -142,13 +142,13 @@ def rules(rule: str | None, form: str, site: str | None) -> None:
         click.echo(as_text(found) if form == "text" else as_markdown(found))
 
 
-@main.command()
+@main.command(short_help="Serve cards over HTTP.")
 def serve() -> None:
     """Serve cards over HTTP, by the settings in GDMT_CARDS_* variables; on loopback unless they say otherwise."""
     _served(lambda settings: _serve(settings))
 
 
-@main.command()
+@main.command(short_help="Remove kept replies and shown cards.")
 @click.option("--before", metavar="DATE", help="Remove what was kept before this day. Default: by the settings.")
 @click.option("--forget", "patient", metavar="PATIENT", help='Remove all that was kept of one patient, "Patient/id".')
 def purge(before: str | None, patient: str | None) -> None:

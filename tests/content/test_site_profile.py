@@ -9,7 +9,6 @@ import json
 import tomllib
 from dataclasses import replace
 from datetime import UTC
-from functools import cache
 from pathlib import Path
 from typing import Any
 
@@ -33,8 +32,7 @@ from builders import (
     sodium,
 )
 from expectations import AS_OF, PATIENTS
-from jsonschema import Draft202012Validator
-from referencing import Registry, Resource
+from published import faults
 
 from cds.assessment import assess, check_orders, describe_records
 from cds.cards.card import LONGEST_HEADLINE, TIERS
@@ -371,22 +369,14 @@ def test_the_example_profile_uses_every_part_there_is():
         assert getattr(site, part), f"the example does not show {part}"
 
 
-@cache
-def registry() -> Registry[Any]:
-    documents = [json.loads(published(f"schemas/{name}.schema.json")) for name in ("assessment", "card")]
-    return Registry().with_resources((one["$id"], Resource.from_contents(one)) for one in documents)
-
-
 def test_what_is_printed_under_the_example_profile_keeps_to_the_published_schema_and_never_varies():
     """For each written patient: same bytes from a profile read twice."""
     one, other = (with_site(CONTENT, read_site(TARNWICK.read_bytes(), name="t")) for _ in range(2))
-    schema = json.loads(published("schemas/assessment.schema.json"))
-    check = Draft202012Validator(schema, registry=registry())
     for folder in sorted(PATIENTS.iterdir()):
         data, moment = (folder / "bundle.json").read_bytes(), parse_as_of(AS_OF, UTC)
         answers = [orjson.dumps(assess(data, content, as_of=moment)) for content in (one, other)]
         assert answers[0] == answers[1], folder.name
-        assert [error.message for error in check.iter_errors(orjson.loads(answers[0]))] == [], folder.name
+        assert faults("assessment", orjson.loads(answers[0])) == [], folder.name
 
 
 def test_the_content_itself_is_left_as_it_was():
@@ -665,9 +655,7 @@ def refused(text: str) -> SiteProfileError:
 
 def schema_faults(text: str) -> list[str]:
     """What any validator would say of the published schema and the parsed profile."""
-    checker = Draft202012Validator.FORMAT_CHECKER
-    schema = Draft202012Validator(json.loads(published(SCHEMA)), format_checker=checker)
-    return [error.message for error in schema.iter_errors(as_json(tomllib.loads(text)))]
+    return faults("site-profile", as_json(tomllib.loads(text)))
 
 
 @pytest.mark.parametrize(("text", "key", "problem", "fix"), AGAINST_THE_SCHEMA)

@@ -7,6 +7,7 @@ from dataclasses import dataclass, field
 from datetime import UTC, date, datetime
 from typing import Any
 
+from builders import creatinine, heart_rate, lvef, nyha, patient, potassium, pressure, problem
 from flask.testing import FlaskClient
 from jsonschema import Draft202012Validator, FormatChecker
 from werkzeug.test import TestResponse
@@ -19,6 +20,17 @@ from cds.service.parts import Parts
 from cds.store.shown import NotedCard, ShownCard
 
 NOW = datetime(2026, 3, 1, 12, 0, tzinfo=UTC)
+DAY = "2026-02-26"
+CHART = (  # reduced ejection fraction, good values, no drug
+    patient(),
+    problem("heart failure", "2025-01-15"),
+    lvef(30, "2025-11-20"),
+    nyha(2, DAY),
+    pressure(118, 70, DAY),
+    heart_rate(70, DAY),
+    creatinine(1.0, DAY),
+    potassium(4.4, DAY),
+)
 DOCUMENT = Contract.load().document
 
 

@@ -10,25 +10,14 @@ from pathlib import Path
 
 import orjson
 import pytest
-from builders import bundle, creatinine, heart_rate, lvef, nyha, order, patient, potassium, pressure, problem
-from in_process import DOCUMENT, NOW, Client, MemoryStore, Seen, parts
+from builders import bundle, order, potassium
+from in_process import CHART, DAY, DOCUMENT, NOW, Client, MemoryStore, Seen, parts
 
 from cds.assessment import assess, check_orders, describe_records
 from cds.content.load import load_content
 from cds.errors import RequestError
 from cds.fhir.reading import Limits
 
-DAY = "2026-02-26"
-CHART = (
-    patient(),
-    problem("heart failure", "2025-01-15"),
-    lvef(30, "2025-11-20"),
-    nyha(2, DAY),
-    pressure(118, 70, DAY),
-    heart_rate(70, DAY),
-    creatinine(1.0, DAY),
-    potassium(4.4, DAY),
-)
 NEW_PATIENT = bundle(*CHART)
 FIXTURES = Path(__file__).parent.parent.parent / "fixtures" / "patients"
 

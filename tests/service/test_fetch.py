@@ -21,10 +21,8 @@ from fhir_server_on_loopback import (
     refusal,
     rules,
     searchset,
-    serve,
     status,
 )
-from pytest_httpserver import HTTPServer
 
 from cds.assessment import assess
 from cds.content.load import load_content
@@ -32,11 +30,6 @@ from cds.fhir.bundle import USED_TYPES
 from cds.service.fetch import Wanted
 
 SEARCHED = USED_TYPES - {"Patient", "Medication"}
-
-
-@pytest.fixture
-def server(httpserver: HTTPServer) -> FhirServer:
-    return serve(httpserver)
 
 
 # What is fetched

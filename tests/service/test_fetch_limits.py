@@ -30,21 +30,13 @@ from fhir_server_on_loopback import (
     refusal,
     rules,
     searchset,
-    serve,
     status,
 )
-from pytest_httpserver import HTTPServer
 from werkzeug import Request, Response
 
 from cds.assessment import assess
 from cds.content.load import load_content
 from cds.service.fetch import FetchError, FetchResult, Wanted, fetch_patient
-
-
-@pytest.fixture
-def server(httpserver: HTTPServer) -> FhirServer:
-    return serve(httpserver)
-
 
 # Again, and how long
 

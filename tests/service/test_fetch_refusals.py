@@ -36,11 +36,6 @@ from werkzeug import Request, Response
 from cds.service.fetch import FetchError
 
 
-@pytest.fixture
-def server(httpserver: HTTPServer) -> FhirServer:
-    return serve(httpserver)
-
-
 @pytest.fixture(scope="module")
 def other_server() -> Iterator[HTTPServer]:
     with HTTPServer(port=0) as other:

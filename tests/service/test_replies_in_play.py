@@ -8,23 +8,14 @@ from datetime import timedelta
 from pathlib import Path
 
 import pytest
-from builders import bundle, creatinine, heart_rate, lvef, nyha, order, patient, potassium, pressure, problem
-from in_process import NOW, Client, parts
+from builders import bundle, order
+from in_process import CHART, NOW, Client, parts
 
-DAY = "2026-02-26"
-CHART = (
-    patient(),
-    problem("heart failure", "2025-01-15"),
-    lvef(30, "2025-11-20"),
-    nyha(2, DAY),
-    pressure(118, 70, DAY),
-    heart_rate(70, DAY),
-    creatinine(1.0, DAY),
-    potassium(4.4, DAY),
+TREATED = (
+    *CHART,
     order("sacubitril/valsartan", 200, 2, since="2025-09-01"),
     order("bisoprolol", 10, since="2025-09-01"),
 )
-
 FIXTURES = Path(__file__).parent.parent.parent / "fixtures" / "patients"
 ORDERS = sorted(path.parent for path in FIXTURES.glob("order-*/bundle.json"))
 
@@ -37,7 +28,7 @@ def answer(client: Client, card: dict, **body: str):
 
 
 def cards_of(client: Client, *more: dict) -> list[dict]:
-    (only,) = client.post("/v1/assessments", bundle(*CHART, *more)).json["assessments"]
+    (only,) = client.post("/v1/assessments", bundle(*TREATED, *more)).json["assessments"]
     return only["cards"]
 
 
@@ -52,7 +43,7 @@ def test_an_order_check_shows_its_danger_again_after_a_day_though_it_was_answere
     client = Client(parts(store=store))
 
     def dangers(asking: Client) -> list[dict]:
-        (check,) = asking.post("/v1/order-checks", bundle(*CHART, written)).json["checks"]
+        (check,) = asking.post("/v1/order-checks", bundle(*TREATED, written)).json["checks"]
         return [card for o in check["orders"] for card in o["cards"] if card["tier"] == "danger"]
 
     (danger,) = dangers(client)
@@ -66,7 +57,7 @@ def test_an_order_check_shows_its_danger_again_after_a_day_though_it_was_answere
 def test_replies_of_one_patient_hold_back_no_card_of_another(store):
     card = next(card for card in cards_of(Client(parts(store=store))) if card["rule"] == "start-mra")
     answer(Client(parts(store=store)), card, code="declined", reason="disagrees")
-    other = json.loads(bundle(*CHART).decode().replace('"p1"', '"p2"').replace("Patient/p1", "Patient/p2"))
+    other = json.loads(bundle(*TREATED).decode().replace('"p1"', '"p2"').replace("Patient/p1", "Patient/p2"))
     (only,) = Client(parts(store=store)).post("/v1/assessments", json.dumps(other).encode()).json["assessments"]
     assert "start-mra" in {card["rule"] for card in only["cards"]}
 

@@ -2,18 +2,14 @@
 
 from __future__ import annotations
 
-import json
 from datetime import UTC
-from functools import cache
-from pathlib import Path
 from zoneinfo import ZoneInfo
 
 import orjson
 import pytest
 from asking import order_check_of
 from builders import bundle, dosage, lvef, named, order, patient, problem, test_order, until, visit
-from jsonschema import Draft202012Validator
-from referencing import Registry, Resource
+from published import faults
 
 from cds.assessment import check_orders
 from cds.content.load import load_content
@@ -22,7 +18,6 @@ from cds.fhir.dates import parse_as_of
 TODAY = "2025-09-15T12:00:00Z"
 DAY = "2025-09-12"
 NEW_YORK = ZoneInfo("America/New_York")
-SCHEMAS = Path(__file__).parents[2] / "openapi" / "schemas"
 
 ENALAPRIL = order("enalapril", 10, 2, since="2025-03-01")
 BISOPROLOL = order("bisoprolol", 10, since="2025-03-01")
@@ -405,20 +400,6 @@ def test_without_a_draft_nothing_is_checked():
     assert (answer["orders"], answer["cards"]) == ([], [])
 
 
-@cache
-def schema(name):
-    return json.loads((SCHEMAS / f"{name}.schema.json").read_text(encoding="utf-8"))
-
-
-def schema_errors(document):
-    known = [schema(path.name.removesuffix(".schema.json")) for path in SCHEMAS.glob("*.schema.json")]
-    registry = Registry().with_resources((one["$id"], Resource.from_contents(one)) for one in known)
-    checker = Draft202012Validator(
-        schema("order-check"), registry=registry, format_checker=Draft202012Validator.FORMAT_CHECKER
-    )
-    return [f"{error.json_path}: {error.message}" for error in checker.iter_errors(document)]
-
-
 @pytest.mark.parametrize(
     "more",
     [
@@ -433,4 +414,4 @@ def schema_errors(document):
 )
 def test_every_answer_is_valid_against_the_published_schema(more):
     whole = check_orders(bundle(*failing(*FOUR, *more)), load_content(), as_of=parse_as_of(TODAY, UTC))
-    assert schema_errors(orjson.loads(orjson.dumps(whole))) == []
+    assert faults("order-check", orjson.loads(orjson.dumps(whole))) == []

@@ -4,8 +4,6 @@ from __future__ import annotations
 
 import json
 from datetime import UTC
-from functools import cache
-from pathlib import Path
 from typing import Any
 
 import orjson
@@ -13,36 +11,14 @@ import pytest
 from asking import assessment_of
 from builders import ATC, SNOMED, bundle, creatinine, lvef, order, patient, potassium, problem, subject
 from jsonschema import Draft202012Validator
+from published import SCHEMAS, faults, registry, schema
 from random_patients import written_patients
-from referencing import Registry, Resource
 
 from cds.assessment import assess, describe_records
 from cds.content.load import load_content
 from cds.fhir.dates import parse_as_of
 
-SCHEMAS = Path(__file__).parents[2] / "openapi" / "schemas"
 NAMES = ("assessment", "card", "record")
-
-
-@cache
-def schema(name: str) -> dict[str, Any]:
-    return dict(json.loads((SCHEMAS / f"{name}.schema.json").read_text(encoding="utf-8")))
-
-
-@cache
-def registry() -> Registry[Any]:
-    return Registry().with_resources((schema(name)["$id"], Resource.from_contents(schema(name))) for name in NAMES)
-
-
-@cache
-def validator(name: str) -> Draft202012Validator:
-    """With formats, so that a date is a date."""
-    checker = Draft202012Validator.FORMAT_CHECKER
-    return Draft202012Validator(schema(name), registry=registry(), format_checker=checker)
-
-
-def faults(name: str, document: object) -> list[str]:
-    return [f"{error.json_path}: {error.message}" for error in validator(name).iter_errors(document)]
 
 
 def printed(name: str, *, trace: bool = True) -> tuple[dict[str, Any], dict[str, Any]]:
